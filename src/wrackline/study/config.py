@@ -1,0 +1,237 @@
+"""The configuration of a study: one typed model, from which schema, defaults and documentation are made."""
+
+from __future__ import annotations
+
+from typing import Annotated, Literal
+
+from pydantic import BaseModel, ConfigDict, Field, field_validator, model_validator
+
+Fraction = Annotated[float, Field(gt=0, lt=1)]
+FlagUse = Literal["keep", "exclude", "below", "above"]
+Distribution = Literal["GLO", "GEV", "GNO", "PE3", "GPA", "KAP", "WAK"]
+FLAG_NAMES = (
+    "estimated",
+    "regulated",
+    "diverted",
+    "regulated_or_diverted",
+    "regulation_unknown",
+    "basin_changed",
+    "dam_break",
+    "daily_mean",
+    "date_uncertain",
+    "unsystematic",
+    "revised",
+    "cause_unspecified",
+)
+SCREENING_FLAGS = (
+    "short_record",
+    "regulated",
+    "trend",
+    "change_point",
+    "serial_correlation",
+    "extreme_flood",
+    "long_gaps",
+    "redundant",
+)
+
+
+class _Part(BaseModel):
+    """A part of the configuration: unknown keys are refused, values are checked, nothing changes later."""
+
+    model_config = ConfigDict(extra="forbid", frozen=True)
+
+
+class About(_Part):
+    """What the study is and who made it; printed on the page and in the manifest."""
+
+    title: str = Field("Regional flood-frequency study", description="Title of the page.")
+    region: str = Field("", description="The region in words.")
+    agency: str = Field("", description="Who is responsible for the study.")
+    purpose: str = Field("", description="What was asked of the study.")
+    edition: str = Field("working", description="Name of this edition; printed with every citation of the run.")
+
+
+class Inputs(_Part):
+    """The study's files, relative to the study file. Blank: the study has none."""
+
+    gauges: str = Field("gauges.csv", description="One row per gauge.")
+    peaks: str = Field("peaks.csv", description="One row per gauge and water year.")
+    thresholds: str = Field("", description="Perception thresholds per gauge and span of years.")
+    periods: str = Field("", description="States of a gauge's basin (natural, regulated, moved ...) per span of years.")
+    targets: str = Field("", description="Ungauged sites for which floods are wanted.")
+    basins: str = Field("", description="GeoPackage with layer `basins` (site_id, polygon).")
+    regions: str = Field("", description="GeoPackage with layer `regions` (region, polygon).")
+    redundancy: str = Field("", description="The analyst's decisions on nested pairs of gauges.")
+    ledger: str = Field("", description="The analyst's decisions, applied by the run and printed.")
+
+
+class Units(_Part):
+    """Units of the study's files and of its published tables; internal work is in m3/s and km2."""
+
+    flow: Literal["m3/s", "ft3/s"] = Field("m3/s", description="Unit of every flow.")
+    area: Literal["km2", "mi2"] = Field("km2", description="Unit of every area.")
+
+
+class Attribute(_Part):
+    """A numeric catchment attribute: a column of gauges.csv and targets.csv."""
+
+    unit: str = Field("", description="Unit as printed.")
+    meaning: str = Field("", description="What it measures.")
+    transform: Literal["none", "log10", "sqrt", "log10_plus_1"] = Field(
+        "none", description="Transformation before it enters a regression."
+    )
+    lower: float | None = Field(None, description="Smallest physically possible value.")
+    upper: float | None = Field(None, description="Largest physically possible value.")
+    source: str = Field("", description="Where the values come from.")
+    date: str = Field("", description="When they were made.")
+
+
+class Aeps(_Part):
+    """Annual exceedance probabilities, as fractions."""
+
+    gauges: tuple[Fraction, ...] = Field(
+        (0.9, 0.8, 0.5, 0.2, 0.1, 0.04, 0.02, 0.01, 0.005, 0.002), description="For gauges and growth curves."
+    )
+    targets: tuple[Fraction, ...] = Field(
+        (0.5, 0.2, 0.1, 0.04, 0.02, 0.01, 0.005, 0.002), description="For ungauged sites."
+    )
+
+    @field_validator("gauges", "targets")
+    @classmethod
+    def _from_often_to_rare(cls, value: tuple[float, ...]) -> tuple[float, ...]:
+        if len(value) == 0 or len(set(value)) != len(value):
+            raise ValueError("give at least one probability, each once")
+        return tuple(sorted(value, reverse=True))
+
+
+class Flags(_Part):
+    """What a peak's flag does to its use: `keep`; `exclude`; `below`: the flood lay between zero and the flow; `above`: at or above it."""
+
+    estimated: FlagUse = Field("keep", description="An estimate is still the best knowledge of that year.")
+    regulated: FlagUse = Field("exclude", description="The study is of natural floods.")
+    diverted: FlagUse = Field("exclude", description="As regulated.")
+    regulated_or_diverted: FlagUse = Field("exclude", description="As regulated.")
+    regulation_unknown: FlagUse = Field("keep", description="Excluding it discards much good record; its share is reported.")
+    basin_changed: FlagUse = Field("exclude", description="Urbanisation, mining, channel works: another population.")
+    dam_break: FlagUse = Field("exclude", description="Not a flood of the basin.")
+    daily_mean: FlagUse = Field("above", description="The instantaneous peak was at least the daily mean.")
+    date_uncertain: FlagUse = Field("keep", description="The flow is not in doubt.")
+    unsystematic: FlagUse = Field("exclude", description="Recorded because it was large; needs a threshold and a historic span to be used.")
+    revised: FlagUse = Field("keep", description="A revision is an improvement.")
+    cause_unspecified: FlagUse = Field("keep", description="Shown in the table of floods by cause.")
+
+
+class Screening(_Part):
+    """Tests on every record. A test flags; only the flags listed in `exclude` take a gauge out."""
+
+    minimum_peaks: int = Field(10, ge=5, description="Exact systematic peaks that a record needs (common practice: 10).")
+    significance: Fraction = Field(0.05, description="Level of the trend, change-point and serial-correlation tests.")
+    false_discovery_control: bool = Field(
+        True, description="Judge the tests over all gauges together (Benjamini and Hochberg, 1995), not one by one."
+    )
+    extreme_ratio: float = Field(1.5, gt=0, description="Flag a record whose largest peak exceeds its median by this many log10 cycles.")
+    gap_share: Fraction = Field(0.5, description="Flag a record that misses more than this share of the years it spans.")
+    redundancy_distance: float = Field(
+        0.5, gt=0, description="Nested pairs: largest distance between basin centroids over the root of the mean area."
+    )
+    redundancy_area_ratio: float = Field(5.0, gt=1, description="Nested pairs: largest ratio of the two areas.")
+    redundancy_overlap: Fraction = Field(
+        0.5, description="Nested pairs with polygons: shared area over the smaller basin, at least."
+    )
+    exclude: tuple[Literal[SCREENING_FLAGS], ...] = Field(  # type: ignore[valid-type]
+        ("short_record", "regulated", "redundant"),
+        description="Flags that take a gauge out of the regional analysis.",
+    )
+
+
+class Dependence(_Part):
+    """Correlation of concurrent annual peaks between gauges, as a function of distance."""
+
+    minimum_common_years: int = Field(25, ge=5, description="Years two gauges must share to inform the distance model.")
+    fallback_common_years: int = Field(
+        15, ge=5, description="Used with a warning when fewer than 30 pairs share `minimum_common_years`."
+    )
+
+
+class Move(_Part):
+    """A gauge that the analyst puts into another region than the inputs say."""
+
+    gauge_id: str
+    to: str = Field(description="The region that takes the gauge; blank: no region.")
+    why: str = Field(min_length=3, description="The written reason; printed in the report.")
+
+
+class PinnedDistribution(_Part):
+    """A distribution that the analyst fixes for a pool."""
+
+    pool: str
+    distribution: Distribution
+    why: str = Field(min_length=3)
+
+
+class Pooling(_Part):
+    """How gauges are pooled, tested and given a growth curve."""
+
+    regions: Literal["column", "polygons", "one"] = Field(
+        "column", description="`column`: gauges.csv says; `polygons`: regions.gpkg says; `one`: all gauges together."
+    )
+    moves: tuple[Move, ...] = Field((), description="Gauges moved between regions, with reasons.")
+    distributions: tuple[PinnedDistribution, ...] = Field((), description="Distributions fixed for a pool, with reasons.")
+    simulations: int = Field(1000, ge=100, description="Simulated regions for the heterogeneity and fit measures.")
+    close_call_simulations: int = Field(
+        10000, ge=100, description="Used when H lies within two simulation errors of 1 or 2."
+    )
+    growth_simulations: int = Field(1000, ge=100, description="Simulated regions for the growth-curve intervals.")
+    minimum_peaks: int = Field(10, ge=8, description="Peaks a gauge needs to enter L-skew and L-kurtosis averages.")
+
+
+class IndexFlood(_Part):
+    """The index flood and its regression on catchment attributes."""
+
+    statistic: Literal["median", "mean"] = Field("median", description="Sample statistic that scales the growth curve.")
+    attributes: tuple[str, ...] = Field(
+        ("area",), description="Attributes in the regression, by name; `area` is taken as log10."
+    )
+    by_region: bool = Field(False, description="Give every region its own intercept.")
+
+
+class StudyConfig(_Part):
+    """A whole study's configuration."""
+
+    study: About = Field(default_factory=About, description=About.__doc__ or "")
+    inputs: Inputs = Field(default_factory=Inputs, description=Inputs.__doc__ or "")
+    units: Units = Field(default_factory=Units, description=Units.__doc__ or "")
+    water_year_starts: int = Field(
+        10, ge=1, le=12, description="First month of the water year, which is named by the calendar year in which it ends."
+    )
+    attributes: dict[str, Attribute] = Field(
+        default_factory=dict, description="Catchment attributes by column name."
+    )
+    output: str = Field("results", description="Folder for the results, relative to the study file.")
+    seed: int = Field(20261001, ge=0, description="Seed of every random stream; the same seed gives the same study.")
+    confidence: Fraction = Field(0.90, description="Probability content of all intervals.")
+    aeps: Aeps = Field(default_factory=Aeps, description=Aeps.__doc__ or "")
+    flags: Flags = Field(default_factory=Flags, description=Flags.__doc__ or "")
+    screening: Screening = Field(default_factory=Screening, description=Screening.__doc__ or "")
+    dependence: Dependence = Field(default_factory=Dependence, description=Dependence.__doc__ or "")
+    pooling: Pooling = Field(default_factory=Pooling, description=Pooling.__doc__ or "")
+    index_flood: IndexFlood = Field(default_factory=IndexFlood, description=IndexFlood.__doc__ or "")
+
+    @model_validator(mode="after")
+    def _attributes_exist(self) -> StudyConfig:
+        unknown = [name for name in self.index_flood.attributes if name != "area" and name not in self.attributes]
+        if unknown:
+            raise ValueError(f"index_flood.attributes names {unknown}, which `attributes` does not declare")
+        return self
+
+    @property
+    def flow_in_m3s(self) -> float:
+        """Cubic metres per second in one unit of the study's flows."""
+        return 1.0 if self.units.flow == "m3/s" else 0.3048**3
+
+    @property
+    def area_in_km2(self) -> float:
+        """Square kilometres in one unit of the study's areas."""
+        return 1.0 if self.units.area == "km2" else 1.609344**2
+
+
