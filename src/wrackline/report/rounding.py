@@ -1,0 +1,112 @@
+"""How numbers are worded for a reader: flows to three significant digits, percentages, probabilities, units."""
+
+from __future__ import annotations
+
+import math
+from decimal import ROUND_HALF_EVEN, Decimal
+
+THIN_SPACE = "\u202f"
+"""Narrow no-break space: parts thousands and stands before a percent sign (ISO 80000-1)."""
+
+_UNITS = {"m3/s": "m³/s", "ft3/s": "ft³/s", "km2": "km²", "mi2": "mi²", "m3": "m³", "ft3": "ft³"}
+
+
+def round_significant(value: float, digits: int = 3) -> str:
+    """Round to significant digits, half to even, without an exponent; blank for NaN or infinity.
+
+    Trailing zeros that are significant stay: the reader sees how far the number is meant.
+
+    >>> round_significant(0.0123456), round_significant(7), round_significant(1.995)
+    ('0.0123', '7.00', '2.00')
+    >>> round_significant(123456.0).replace(THIN_SPACE, " ")
+    '123 000'
+    """
+    if not math.isfinite(value):
+        return ""
+    if value == 0:
+        return "0"
+    exact = Decimal(repr(float(value)))
+    unit = Decimal(1).scaleb(exact.adjusted() - digits + 1)
+    rounded = exact.quantize(unit, rounding=ROUND_HALF_EVEN)
+    if rounded.adjusted() > exact.adjusted():
+        rounded = rounded.quantize(unit.scaleb(1))
+    return _parted(format(rounded, "f"))
+
+
+def round_flow(value: float) -> str:
+    """Word a flow for the page: three significant digits, in whatever unit it came.
+
+    >>> round_flow(86.449), round_flow(1234.5)
+    ('86.4', '1230')
+    """
+    return round_significant(value, 3)
+
+
+def round_interval(lower: float, upper: float) -> str:
+    """Word the two ends of an interval of flows; an end that is not finite is left open.
+
+    >>> round_interval(71.04, 105.5), round_interval(71.04, float("inf"))
+    ('71.0 to 106', '71.0 or more')
+    """
+    if math.isfinite(lower) and math.isfinite(upper):
+        return f"{round_flow(lower)} to {round_flow(upper)}"
+    if math.isfinite(lower):
+        return f"{round_flow(lower)} or more"
+    return f"{round_flow(upper)} or less" if math.isfinite(upper) else ""
+
+
+def percent(fraction: float, digits: int = 3) -> str:
+    """Word a fraction as a percentage, without needless zeros; blank when not finite.
+
+    >>> percent(0.1234).replace(THIN_SPACE, " "), percent(0.9).replace(THIN_SPACE, " ")
+    ('12.3 %', '90 %')
+    """
+    text = round_significant(100.0 * round(fraction, 12), digits) if math.isfinite(fraction) else ""
+    if "." in text:
+        text = text.rstrip("0").rstrip(".")
+    return f"{text}{THIN_SPACE}%" if text else ""
+
+
+def aep_label(aep: float) -> str:
+    """Word an annual exceedance probability (a fraction) as a percentage.
+
+    >>> aep_label(0.01).replace(THIN_SPACE, " "), aep_label(0.002).replace(THIN_SPACE, " ")
+    ('1 %', '0.2 %')
+    """
+    return percent(aep, 6)
+
+
+def aep_column(aep: float) -> str:
+    """Name a column for an annual exceedance probability.
+
+    >>> aep_column(0.01), aep_column(0.002), aep_column(1e-5)
+    ('aep_0_01', 'aep_0_002', 'aep_0_00001')
+    """
+    return "aep_" + format(Decimal(repr(float(aep))), "f").replace(".", "_")
+
+
+def count_label(count: int) -> str:
+    """Word a count, thousands parted.
+
+    >>> count_label(60123).replace(THIN_SPACE, " "), count_label(1234)
+    ('60 123', '1234')
+    """
+    return _parted(str(int(count)))
+
+
+def unit_label(unit: str) -> str:
+    """Set a declared unit with its exponents raised.
+
+    >>> unit_label("ft3/s"), unit_label("mm")
+    ('ft³/s', 'mm')
+    """
+    return _UNITS.get(unit, unit)
+
+
+def _parted(number: str) -> str:
+    sign = "\u2212" if number.startswith("-") else ""
+    whole, point, rest = number.lstrip("-").partition(".")
+    if len(whole) > 4:
+        head = len(whole) % 3 or 3
+        whole = THIN_SPACE.join([whole[:head], *(whole[i : i + 3] for i in range(head, len(whole), 3))])
+    return sign + whole + point + rest
