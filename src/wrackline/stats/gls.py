@@ -10,7 +10,76 @@ from numpy.typing import NDArray
 from scipy.optimize import brentq
 
 FloatArray = NDArray[np.float64]
-Method = Literal["moments", "reml"]
+Method = Literal["moments", "reml", "ml"]
+
+
+@dataclass(frozen=True)
+class SpectralSystem:
+    """A regression turned to the axes of its sampling covariance, where every trial variance is cheap.
+
+    Attributes
+    ----------
+    y, design : (n,), (n, k)
+        Response and columns along the axes.
+    eigenvalues : (n,)
+        Sampling variances along the axes.
+    axes : (n, n) or None
+        Columns are the axes; None where the sampling covariance was diagonal.
+    """
+
+    y: FloatArray
+    design: FloatArray
+    eigenvalues: FloatArray
+    axes: FloatArray | None
+
+
+@dataclass(frozen=True)
+class TrialFits:
+    """What generalized least squares gives at each of m trial values of the model-error variance.
+
+    Attributes
+    ----------
+    coefficients : (m, k)
+    information : (m, k, k)
+        ``X' L^-1 X``.
+    squares : (m,)
+        ``(y - X b)' L^-1 (y - X b)``.
+    log_det_cover, log_det_information : (m,)
+        Logarithms of the determinants of ``L`` and of the information.
+    """
+
+    coefficients: FloatArray
+    information: FloatArray
+    squares: FloatArray
+    log_det_cover: FloatArray
+    log_det_information: FloatArray
+
+
+def turn_system(y: FloatArray, design: FloatArray, sampling: FloatArray) -> SpectralSystem:
+    """Diagonalise the sampling covariance once, (n,) variances or (n, n), and turn the regression to its axes."""
+    if sampling.ndim == 1:
+        return SpectralSystem(y, design, sampling, None)
+    eigenvalues, axes = np.linalg.eigh(sampling)
+    return SpectralSystem(axes.T @ y, axes.T @ design, eigenvalues, axes)
+
+
+def fit_trials(system: SpectralSystem, variances: FloatArray) -> TrialFits:
+    """Fit the coefficients at each trial model-error variance, all at once; ``variances`` (m,)."""
+    n, k = system.design.shape
+    cover = system.eigenvalues + np.asarray(variances)[:, None]
+    weight = 1.0 / cover
+    products = (system.design[:, :, None] * system.design[:, None, :]).reshape(n, k * k)
+    information = (weight @ products).reshape(-1, k, k)
+    right = weight @ (system.design * system.y[:, None])
+    coefficients = np.linalg.solve(information, right[:, :, None])[:, :, 0]
+    residuals = system.y - coefficients @ system.design.T
+    return TrialFits(
+        coefficients=coefficients,
+        information=information,
+        squares=np.einsum("mn,mn,mn->m", weight, residuals, residuals),
+        log_det_cover=np.log(cover).sum(axis=1),
+        log_det_information=np.linalg.slogdet(information)[1],
+    )
 
 
 @dataclass(frozen=True)
@@ -24,7 +93,7 @@ class GlsFit:
         ``(X' L^-1 X)^-1`` with ``L = model_variance * I + S``; not rescaled, since ``L`` is known.
     model_variance : float
         Variance of the model error, in squared units of ``y``.
-    method : {"moments", "reml"}
+    method : {"moments", "reml", "ml"}
     fitted, residuals : (n,)
     leverage : (n,)
         Diagonal of ``X (X' L^-1 X)^-1 X' L^-1``; adds up to ``k``.
@@ -61,9 +130,10 @@ def fit_gls(y: FloatArray, design: FloatArray, sampling: FloatArray, method: Met
         Columns of the regression, the constant included.
     sampling : (n,) or (n, n)
         Sampling variances, or the whole sampling covariance.
-    method : {"reml", "moments"}
-        How the model-error variance is estimated: restricted maximum likelihood, or by setting the
-        weighted sum of squares to its expectation. Both are zero when sampling explains the scatter.
+    method : {"reml", "moments", "ml"}
+        How the model-error variance is estimated: restricted maximum likelihood, by setting the weighted
+        sum of squares to its expectation, or maximum likelihood (biased low, for comparison). All are
+        zero when sampling explains the scatter.
 
     Raises
     ------
@@ -80,20 +150,19 @@ def fit_gls(y: FloatArray, design: FloatArray, sampling: FloatArray, method: Met
         raise ValueError(f"{n} sites cannot carry {k} coefficients")
     if np.linalg.matrix_rank(design) < k:
         raise ValueError("some columns of the regression are combinations of others")
-    if sampling.ndim == 1:
-        eigenvalues, axes = sampling, None
-        y_turned, design_turned = y, design
-    else:
-        eigenvalues, axes = np.linalg.eigh(sampling)
-        y_turned, design_turned = axes.T @ y, axes.T @ design
-    model_variance = _estimate_model_variance(y_turned, design_turned, eigenvalues, method)
+    system = turn_system(y, design, sampling)
+    return _fit_at(system, y, design, estimate_model_variance(system, method), method)
 
-    weight = 1.0 / (eigenvalues + model_variance)
-    covariance = np.linalg.inv(design_turned.T @ (weight[:, None] * design_turned))
-    coefficients = covariance @ (design_turned.T @ (weight * y_turned))
-    scores = weight[:, None] * design_turned
-    if axes is not None:
-        scores = axes @ scores
+
+def _fit_at(
+    system: SpectralSystem, y: FloatArray, design: FloatArray, model_variance: float, method: Method
+) -> GlsFit:
+    weight = 1.0 / (system.eigenvalues + model_variance)
+    covariance = np.linalg.inv(system.design.T @ (weight[:, None] * system.design))
+    coefficients = covariance @ (system.design.T @ (weight * system.y))
+    scores = weight[:, None] * system.design
+    if system.axes is not None:
+        scores = system.axes @ scores
     fitted = design @ coefficients
     return GlsFit(
         coefficients=coefficients,
@@ -112,31 +181,28 @@ def spread(design: FloatArray, covariance: FloatArray) -> FloatArray:
     return np.einsum("ij,jk,ik->i", design, covariance, design)
 
 
-def _estimate_model_variance(y: FloatArray, design: FloatArray, d: FloatArray, method: Method) -> float:
+def estimate_model_variance(system: SpectralSystem, method: Method) -> float:
+    """Estimate the model-error variance by moments, restricted or plain maximum likelihood; never negative."""
+    y, design, d = system.y, system.design, system.eigenvalues
     n, k = design.shape
 
-    def residual_and_weight(variance: float) -> tuple[FloatArray, FloatArray, FloatArray]:
+    def excess(variance: float) -> float:
+        """Positive below the estimate, negative above it."""
         weight = 1.0 / (d + variance)
-        information = design.T @ (weight[:, None] * design)
-        b = np.linalg.solve(information, design.T @ (weight * y))
-        return y - design @ b, weight, information
-
-    def excess_of_squares(variance: float) -> float:
-        residual, weight, _ = residual_and_weight(variance)
-        return float(np.sum(weight * residual**2) - (n - k))
-
-    def reml_slope(variance: float) -> float:
-        residual, weight, information = residual_and_weight(variance)
-        trace = weight.sum() - np.trace(
-            np.linalg.solve(information, design.T @ ((weight**2)[:, None] * design))
-        )
+        weighted = weight[:, None] * design
+        information = design.T @ weighted
+        residual = y - design @ np.linalg.solve(information, weighted.T @ y)
+        if method == "moments":
+            return float(weight @ residual**2 - (n - k))
+        trace = weight.sum()
+        if method == "reml":
+            trace -= np.trace(np.linalg.solve(information, weighted.T @ weighted))
         return float(np.sum((weight * residual) ** 2) - trace)
 
-    function = excess_of_squares if method == "moments" else reml_slope
     ols = y - design @ np.linalg.lstsq(design, y, rcond=None)[0]
     largest = 10.0 * float(ols @ ols) / (n - k) + 1e-300
     # A singular sampling covariance has no finite weight at zero; this floor is far below any variance of use.
     smallest = 1e-12 * largest if d.min() <= 0 else 0.0
-    if function(smallest) <= 0:
+    if excess(smallest) <= 0:
         return smallest
-    return float(brentq(function, smallest, largest, xtol=1e-14 * largest, rtol=1e-13))
+    return float(brentq(excess, smallest, largest, xtol=1e-14 * largest, rtol=1e-13))
