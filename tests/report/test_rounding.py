@@ -7,12 +7,12 @@ import pytest
 from wrackline.report import rounding
 from wrackline.report.rounding import (
     THIN_SPACE,
-    aep_column,
-    aep_label,
-    percent,
-    round_flow,
-    round_interval,
-    round_significant,
+    format_aep,
+    format_flow,
+    format_interval,
+    format_percent,
+    format_significant,
+    name_aep_column,
 )
 
 
@@ -33,28 +33,28 @@ from wrackline.report.rounding import (
     ],
 )
 def test_flow_keeps_three_significant_digits_without_exponent(expected, flow):
-    assert expected == round_flow(flow)
+    assert expected == format_flow(flow)
 
 
 def test_rounding_error_is_below_half_of_the_third_digit_at_every_scale():
     for exponent in range(-6, 9):
         for lead in (1.0049, 3.14159, 9.9949, 9.9951):
             value = lead * 10.0**exponent
-            read_back = float(round_significant(value).replace(THIN_SPACE, ""))
+            read_back = float(format_significant(value).replace(THIN_SPACE, ""))
             assert abs(read_back - value) <= 0.005 * 10.0**exponent * (1 + 1e-9)
 
 
 def test_values_that_do_not_exist_are_blank():
     assert [
-        round_flow(float("nan")),
-        round_flow(float("inf")),
-        percent(float("nan")),
-        round_interval(float("nan"), float("nan")),
+        format_flow(float("nan")),
+        format_flow(float("inf")),
+        format_percent(float("nan")),
+        format_interval(float("nan"), float("nan")),
     ] == [""] * 4
 
 
 def test_open_interval_says_which_end_is_known():
-    assert round_interval(float("nan"), 12.0) == "12.0 or less"
+    assert format_interval(float("nan"), 12.0) == "12.0 or less"
 
 
 @pytest.mark.parametrize(
@@ -67,8 +67,8 @@ def test_open_interval_says_which_end_is_known():
     ],
 )
 def test_probabilities_are_worded_as_percent_and_as_column(label, column, aep):
-    assert label == aep_label(aep).replace(THIN_SPACE, " ")
-    assert column == aep_column(aep)
+    assert label == format_aep(aep).replace(THIN_SPACE, " ")
+    assert column == name_aep_column(aep)
 
 
 def test_examples_in_the_documentation_hold():

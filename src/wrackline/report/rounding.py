@@ -1,4 +1,4 @@
-"""How numbers are worded for a reader: flows to three significant digits, percentages, probabilities, units."""
+"""How numbers are worded for a reader: flows to three significant digits, percentages, probabilities."""
 
 from __future__ import annotations
 
@@ -11,14 +11,14 @@ THIN_SPACE = "\u202f"
 _UNITS = {"m3/s": "m³/s", "ft3/s": "ft³/s", "km2": "km²", "mi2": "mi²", "m3": "m³", "ft3": "ft³"}
 
 
-def round_significant(value: float, digits: int = 3) -> str:
+def format_significant(value: float, digits: int = 3) -> str:
     """Round to significant digits, half to even, without an exponent; blank for NaN or infinity.
 
     Trailing zeros that are significant stay: the reader sees how far the number is meant.
 
-    >>> round_significant(0.0123456), round_significant(7), round_significant(1.995)
+    >>> format_significant(0.0123456), format_significant(7), format_significant(1.995)
     ('0.0123', '7.00', '2.00')
-    >>> round_significant(123456.0).replace(THIN_SPACE, " ")
+    >>> format_significant(123456.0).replace(THIN_SPACE, " ")
     '123 000'
     """
     if not math.isfinite(value):
@@ -33,71 +33,71 @@ def round_significant(value: float, digits: int = 3) -> str:
     return _parted(format(rounded, "f"))
 
 
-def round_flow(value: float) -> str:
+def format_flow(value: float) -> str:
     """Word a flow for the page: three significant digits, in whatever unit it came.
 
-    >>> round_flow(86.449), round_flow(1234.5)
+    >>> format_flow(86.449), format_flow(1234.5)
     ('86.4', '1230')
     """
-    return round_significant(value, 3)
+    return format_significant(value, 3)
 
 
-def round_interval(lower: float, upper: float) -> str:
+def format_interval(lower: float, upper: float) -> str:
     """Word the two ends of an interval of flows; an end that is not finite is left open.
 
-    >>> round_interval(71.04, 105.5), round_interval(71.04, float("inf"))
+    >>> format_interval(71.04, 105.5), format_interval(71.04, float("inf"))
     ('71.0 to 106', '71.0 or more')
     """
     if math.isfinite(lower) and math.isfinite(upper):
-        return f"{round_flow(lower)} to {round_flow(upper)}"
+        return f"{format_flow(lower)} to {format_flow(upper)}"
     if math.isfinite(lower):
-        return f"{round_flow(lower)} or more"
-    return f"{round_flow(upper)} or less" if math.isfinite(upper) else ""
+        return f"{format_flow(lower)} or more"
+    return f"{format_flow(upper)} or less" if math.isfinite(upper) else ""
 
 
-def percent(fraction: float, digits: int = 3) -> str:
+def format_percent(fraction: float, digits: int = 3) -> str:
     """Word a fraction as a percentage, without needless zeros; blank when not finite.
 
-    >>> percent(0.1234).replace(THIN_SPACE, " "), percent(0.9).replace(THIN_SPACE, " ")
+    >>> format_percent(0.1234).replace(THIN_SPACE, " "), format_percent(0.9).replace(THIN_SPACE, " ")
     ('12.3 %', '90 %')
     """
-    text = round_significant(100.0 * round(fraction, 12), digits) if math.isfinite(fraction) else ""
+    text = format_significant(100.0 * round(fraction, 12), digits) if math.isfinite(fraction) else ""
     if "." in text:
         text = text.rstrip("0").rstrip(".")
     return f"{text}{THIN_SPACE}%" if text else ""
 
 
-def aep_label(aep: float) -> str:
+def format_aep(aep: float) -> str:
     """Word an annual exceedance probability (a fraction) as a percentage.
 
-    >>> aep_label(0.01).replace(THIN_SPACE, " "), aep_label(0.002).replace(THIN_SPACE, " ")
+    >>> format_aep(0.01).replace(THIN_SPACE, " "), format_aep(0.002).replace(THIN_SPACE, " ")
     ('1 %', '0.2 %')
     """
-    return percent(aep, 6)
+    return format_percent(aep, 6)
 
 
-def aep_column(aep: float) -> str:
+def name_aep_column(aep: float) -> str:
     """Name a column for an annual exceedance probability.
 
-    >>> aep_column(0.01), aep_column(0.002), aep_column(1e-5)
+    >>> name_aep_column(0.01), name_aep_column(0.002), name_aep_column(1e-5)
     ('aep_0_01', 'aep_0_002', 'aep_0_00001')
     """
     return "aep_" + format(Decimal(repr(float(aep))), "f").replace(".", "_")
 
 
-def count_label(count: int) -> str:
+def format_count(count: int) -> str:
     """Word a count, thousands parted.
 
-    >>> count_label(60123).replace(THIN_SPACE, " "), count_label(1234)
+    >>> format_count(60123).replace(THIN_SPACE, " "), format_count(1234)
     ('60 123', '1234')
     """
     return _parted(str(int(count)))
 
 
-def unit_label(unit: str) -> str:
+def format_unit(unit: str) -> str:
     """Set a declared unit with its exponents raised.
 
-    >>> unit_label("ft3/s"), unit_label("mm")
+    >>> format_unit("ft3/s"), format_unit("mm")
     ('ft³/s', 'mm')
     """
     return _UNITS.get(unit, unit)
