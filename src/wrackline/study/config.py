@@ -33,6 +33,10 @@ SCREENING_FLAGS = (
     "long_gaps",
     "redundant",
 )
+RESERVED_COLUMNS = frozenset(
+    ["gauge_id", "target_id", "site_id", "name", "latitude", "longitude", "area", "area_km2", "contributing_area", "contributing_area_km2", "centroid_latitude", "centroid_longitude", "centroid_source", "region", "regulated", "upstream_gauge", "downstream_gauge", "remark", "row", "used", "reasons"]
+)
+"""Columns of the tables of sites, which no catchment attribute can be named after."""
 
 
 class _Part(BaseModel):
@@ -223,6 +227,20 @@ class StudyConfig(_Part):
         if unknown:
             raise ValueError(f"index_flood.attributes names {unknown}, which `attributes` does not declare")
         return self
+
+    @model_validator(mode="after")
+    def _attribute_names_are_free(self) -> StudyConfig:
+        taken = sorted(set(self.attributes) & RESERVED_COLUMNS)
+        if taken:
+            raise ValueError(f"attributes cannot be named {', '.join(taken)}: the tables have such columns already")
+        return self
+
+    @property
+    def attributes_in_use(self) -> tuple[str, ...]:
+        """Declared attributes that some section of the study names in its own `attributes`, sorted."""
+        sections = (getattr(self, name) for name in type(self).model_fields)
+        named = {a for section in sections if isinstance(section, _Part) for a in getattr(section, "attributes", ())}
+        return tuple(sorted(named & set(self.attributes)))
 
     @property
     def flow_in_m3s(self) -> float:
