@@ -14,7 +14,12 @@ if TYPE_CHECKING:
 
 KM_PER_DEGREE = 111.195
 """Kilometres in one degree of a great circle, on a sphere of radius 6371 km."""
+WIDTH, LEFT, LEGEND, BELOW, ABOVE = 7.2, 0.62, 1.75, 0.72, 0.1
+"""Inches: the figure's width, and the room left, right (for the legend), below and above the frame."""
+PROPORTIONS = (0.45, 1.35)
+"""Least and largest height of the frame over its width."""
 LEGEND_GROUPS = 12
+LEGEND_LETTERS = 20
 LABELLED_TARGETS = 15
 
 
@@ -67,21 +72,25 @@ def draw_study_map(
     map, so shapes and the scale bar are true there. Longitudes are unwrapped, so that a region on both
     sides of the 180th meridian stays in one piece.
     """
-    figure, axes = new_figure(7.2, 6.0)
+    figure, axes = new_figure(WIDTH, WIDTH)
+    figure.set_layout_engine("none")
     centre = _central_longitude(np.concatenate([gauges.longitude, targets.longitude]))
     east_gauges, east_targets = (_unwrap(place.longitude, centre) for place in (gauges, targets))
     _draw_outlines(axes, basins, centre, color=MUTED, linewidth=0.5, alpha=0.55)
     _draw_outlines(axes, regions, centre, color=INK, linewidth=1.1, alpha=0.75, linestyle=(0, (6, 3)))
     _draw_gauges(axes, gauges, east_gauges, np.asarray(used, dtype=bool))
     _draw_targets(axes, targets, east_targets)
-    _frame(axes)
+    _frame(figure, axes)
     axes.legend(
         title=group_title if any(gauges.group) else None,
         loc="upper left",
         bbox_to_anchor=(1.01, 1.0),
         borderaxespad=0.0,
         alignment="left",
+        frameon=False,
         fontsize=8.5,
+        title_fontsize=8.5,
+        labelspacing=0.6,
     )
     return figure
 
@@ -93,7 +102,11 @@ def _draw_gauges(axes: Any, gauges: Places, east: np.ndarray, used: np.ndarray) 
     for number, group in enumerate(groups):
         here = used & (group_of == group)
         colour, marker = group_look(number)
-        label = _legible(group or "gauge used", f"no. {number + 1}") if number < LEGEND_GROUPS else None
+        label = (
+            _legible(group or "gauge used", f"no. {number + 1}", LEGEND_LETTERS)
+            if number < LEGEND_GROUPS
+            else None
+        )
         axes.scatter(
             east[here],
             gauges.latitude[here],
@@ -156,30 +169,42 @@ def _rings(shape: Any) -> list[np.ndarray]:
     return [np.asarray(part.exterior.coords)[:, :2] for part in parts if not part.is_empty]
 
 
-def _legible(text: str, instead: str) -> str:
+def _legible(text: str, instead: str, most: int = 40) -> str:
     """Return the text when the figure's font has all its letters, else what stands for it; never a formula."""
     from matplotlib.font_manager import findfont, get_font
 
     letters = get_font(findfont("DejaVu Sans")).get_charmap()
-    return text.replace("$", r"\$") if all(ord(letter) in letters for letter in text) else instead
+    if not all(ord(letter) in letters for letter in text):
+        return instead
+    short = text if len(text) <= most else text[: most - 1] + "…"
+    return short.replace("$", r"\$")
 
 
-def _frame(axes: Any) -> None:
+def _frame(figure: Figure, axes: Any) -> None:
+    """Fit the frame to the land, between a broad strip and a tall one, and state directions and scale."""
     axes.margins(0.06)
     axes.autoscale_view()
-    middle = float(np.mean(axes.get_ylim()))
-    across = max(np.cos(np.radians(middle)), 0.05)
-    axes.set_aspect(1.0 / across, adjustable="box")
+    (west, east), (south, north) = axes.get_xlim(), axes.get_ylim()
+    across = max(float(np.cos(np.radians((south + north) / 2.0))), 0.05)
+    wide = WIDTH - LEFT - LEGEND
+    tall = float(np.clip((north - south) / ((east - west) * across), *PROPORTIONS)) * wide
+    figure.set_size_inches(WIDTH, tall + BELOW + ABOVE)
+    height = tall + BELOW + ABOVE
+    axes.set_position((LEFT / WIDTH, BELOW / height, wide / WIDTH, tall / height))
+    degrees_east = max(east - west, (north - south) * wide / tall / across)
+    degrees_north = degrees_east * across * tall / wide
+    west, south = (west + east - degrees_east) / 2.0, (south + north - degrees_north) / 2.0
+    axes.set_xlim(west, west + degrees_east)
+    axes.set_ylim(south, south + degrees_north)
     axes.xaxis.set_major_locator(_few_ticks())
     axes.yaxis.set_major_locator(_few_ticks())
-    axes.xaxis.set_major_formatter(lambda value, _: degrees((value + 180.0) % 360.0 - 180.0, "E", "W"))
-    axes.yaxis.set_major_formatter(lambda value, _: degrees(value, "N", "S"))
+    axes.xaxis.set_major_formatter(lambda value, _: format_degrees((value + 180.0) % 360.0 - 180.0, "E", "W"))
+    axes.yaxis.set_major_formatter(lambda value, _: format_degrees(value, "N", "S"))
     axes.tick_params(labelsize=8, length=3)
-    for side in ("top", "right"):
-        axes.spines[side].set_visible(True)
-    for spine in axes.spines.values():
+    for side, spine in axes.spines.items():
+        spine.set_visible(side in ("top", "right", "bottom", "left"))
         spine.set_color("#c9d1d7")
-    _draw_scale_bar(axes, KM_PER_DEGREE * across)
+    _draw_scale_bar(axes, KM_PER_DEGREE * across, tall)
 
 
 def _few_ticks() -> Any:
@@ -188,19 +213,19 @@ def _few_ticks() -> Any:
     return MaxNLocator(nbins=5, steps=[1, 2, 2.5, 5, 10])
 
 
-def _draw_scale_bar(axes: Any, km_per_degree_east: float) -> None:
-    """Draw the scale below the frame, where it cannot hide a gauge."""
+def _draw_scale_bar(axes: Any, km_per_degree_east: float, tall: float) -> None:
+    """Draw the scale below the frame, where it cannot hide a gauge (``tall``: height of the frame, inches)."""
     from matplotlib.transforms import blended_transform_factory
 
     west, east = axes.get_xlim()
     length = nice_length((east - west) * km_per_degree_east / 4.0)
     step = length / km_per_degree_east
     place = blended_transform_factory(axes.transData, axes.transAxes)
-    for start, colour in ((east - step, INK), (east - step / 2.0, PAPER)):
+    for start, colour in ((west, INK), (west + step / 2.0, PAPER)):
         axes.fill_between(
             [start, start + step / 2.0],
-            -0.105,
-            -0.093,
+            -0.50 / tall,
+            -0.44 / tall,
             transform=place,
             facecolor=colour,
             edgecolor=INK,
@@ -210,11 +235,11 @@ def _draw_scale_bar(axes: Any, km_per_degree_east: float) -> None:
         )
     axes.set_xlim(west, east)
     axes.text(
-        east - step,
-        -0.125,
-        f"{length:g} km; north is up",
+        west + step * 1.06,
+        -0.47 / tall,
+        f"{length:g} km, north is up",
         transform=place,
-        va="top",
+        va="center",
         fontsize=8,
         clip_on=False,
     )
@@ -231,14 +256,16 @@ def nice_length(km: float) -> float:
     return float(lead * power)
 
 
-def degrees(value: float, positive: str, negative: str) -> str:
+def format_degrees(value: float, positive: str, negative: str) -> str:
     """Word a longitude or latitude.
 
-    >>> degrees(-71.5, "E", "W"), degrees(0.0, "N", "S")
+    >>> format_degrees(-71.5, "E", "W"), format_degrees(0.0, "N", "S")
     ('71.5° W', '0°')
     """
     text = f"{abs(round(value, 6)):g}°"
-    return text if round(value, 6) == 0 else f"{text} {positive if value > 0 else negative}"
+    return (
+        text if round(value, 6) in (-180.0, 0.0, 180.0) else f"{text} {positive if value > 0 else negative}"
+    )
 
 
 def _central_longitude(longitude: np.ndarray) -> float:
