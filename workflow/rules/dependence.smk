@@ -1,0 +1,18 @@
+# How floods at two gauges go together, as a function of distance.
+rule dependence:
+    input:
+        records="work/screen/records.csv",
+        used="work/screen/gauges.csv",
+        gauges="work/intake/gauges.csv",
+    output:
+        contribution="work/dependence/contribution.json",
+        model="work/dependence/model.json",
+    log:
+        "work/logs/dependence.log",
+    conda:
+        "../envs/python.yaml"
+    params:
+        settings=settings(CONFIG, "dependence"),
+        sources=source_digest("dependence"),
+    shell:
+        stage_call("dependence")

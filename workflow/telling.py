@@ -1,0 +1,53 @@
+"""What the workflow tells: little while it runs, at the end where to look."""
+
+from __future__ import annotations
+
+import logging
+import sys
+from pathlib import Path
+
+CHATTER = (
+    "Assuming unrestricted shared filesystem",
+    "Building DAG of jobs",
+    "Using shell:",
+    "Select jobs to execute",
+    "Execute ",
+    "Complete log",
+    "Elapsed time",
+    "Shutting down",
+    "Exiting because a job execution failed",
+    "At least one job did not complete",
+    "WorkflowError:\nAt least one job did not complete",
+)
+
+
+def hush(dry_run: bool) -> None:
+    """Leave out the engine's own running commentary, and its traceback of a stage that has told its error itself."""
+    if not dry_run:
+        logging.getLogger("snakemake.logging").addFilter(_worth_telling)
+
+
+def _worth_telling(record: logging.LogRecord) -> bool:
+    message = record.getMessage()
+    if record.levelno > logging.WARNING and "CalledProcessError" in message and ".stages." in message:
+        return False
+    return not message.startswith(CHATTER)
+
+
+def tell_results(results: Path) -> None:
+    """Say where the page, the tables and the maps lie."""
+    print(
+        f"\nThe study is done.\n  page    {results / 'report.html'}\n  tables  {results / 'tables'}"
+        f"\n  maps    {results / 'maps'}\n  record  {results / 'manifest.json'}",
+        file=sys.stderr,
+    )
+
+
+def tell_failure(folder: Path, stages: tuple[str, ...]) -> None:
+    """Say what the failed stage said, and where its log lies; results of an earlier run were not touched before `publish`."""
+    logs = [folder / "work" / "logs" / f"{stage}.log" for stage in stages]
+    written = [log for log in logs if log.is_file()]
+    if not written:
+        return
+    last = max(written, key=lambda log: log.stat().st_mtime_ns)
+    print(f"\nThe study stopped in stage `{last.stem}`. Its log: {last}", file=sys.stderr)

@@ -1,0 +1,97 @@
+"""What every rule shares: how a stage is called, and what makes its results out of date."""
+
+from __future__ import annotations
+
+import ast
+import hashlib
+import json
+import os
+import sys
+from functools import cache
+from pathlib import Path
+from typing import Any
+
+SOURCES = Path(__file__).resolve().parents[1] / "src"
+PACKAGE = "wrackline"
+STAGES = ("intake", "screen", "dependence", "pool", "regress", "estimate", "publish")
+
+
+def stage_call(stage: str) -> str:
+    """Return the shell command of a stage: its output goes to the screen and to the rule's log.
+
+    The stage runs from the sources beside this file, which are those that `source_digest` watches.
+    ``-P`` keeps files of the study's own folder from being taken for modules.
+    """
+    place = f"[{STAGES.index(stage) + 1} of {len(STAGES)}] {stage} ..."
+    return (
+        f"echo '{place}'; PYTHONPATH={{SOURCES:q}} python -P -m {PACKAGE}.stages.{stage} {{STUDY.name:q}}"
+        " 2>&1 | tee {log:q}"
+    )
+
+
+def settings(config: Any, *parts: str) -> str:
+    """Return the named parts of the typed configuration as text: a change of any other part is no reason to rerun."""
+    return json.dumps({part: config.model_dump(mode="json")[part] for part in parts}, sort_keys=True)
+
+
+def source_digest(stage: str) -> str:
+    """Digest the sources of a stage: its module, every module it imports in turn, and the templates beside them."""
+    digest = hashlib.sha256()
+    for path in stage_sources(stage):
+        digest.update(path.relative_to(SOURCES).as_posix().encode() + b"\0" + path.read_bytes() + b"\0")
+    return digest.hexdigest()[:16]
+
+
+def stage_sources(stage: str) -> list[Path]:
+    """List the files of the package that a stage uses, in order of name."""
+    found: set[Path] = set()
+    waiting = [SOURCES / PACKAGE / "stages" / f"{stage}.py"]
+    while waiting:
+        path = waiting.pop()
+        if path in found or not path.is_file():
+            continue
+        found.add(path)
+        waiting.extend(_files_of(path))
+    return sorted(found)
+
+
+@cache
+def _files_of(path: Path) -> tuple[Path, ...]:
+    """Files that one module draws in: imported modules, their packages, and data files it names in its text."""
+    names: set[str] = set()
+    data: set[Path] = set()
+    for node in ast.walk(ast.parse(path.read_bytes())):
+        if isinstance(node, ast.Import):
+            names.update(alias.name for alias in node.names)
+        elif isinstance(node, ast.ImportFrom):
+            origin = _absolute_name(path, node)
+            names.add(origin)
+            names.update(f"{origin}.{alias.name}" for alias in node.names)
+        elif isinstance(node, ast.Constant) and isinstance(node.value, str) and "\n" not in node.value:
+            beside = path.parent / node.value
+            if node.value and len(node.value) < 100 and beside.is_file():
+                data.add(beside)
+    own = {name for name in names if name.split(".")[0] == PACKAGE}
+    return tuple(sorted({file for name in own for file in _module_files(name)} | data))
+
+
+def _absolute_name(path: Path, node: ast.ImportFrom) -> str:
+    if node.level == 0:
+        return node.module or ""
+    package = path.relative_to(SOURCES).parts[: -node.level]
+    return ".".join([*package, *([node.module] if node.module else [])])
+
+
+def _module_files(name: str) -> list[Path]:
+    """Files that importing a dotted name runs: the module and the ``__init__`` of every package above it."""
+    steps = name.split(".")
+    files = [SOURCES.joinpath(*steps[:depth], "__init__.py") for depth in range(1, len(steps) + 1)]
+    return [file for file in [*files, SOURCES.joinpath(*steps).with_suffix(".py")] if file.is_file()]
+
+
+def use_this_python() -> None:
+    """Let stages find the Python that runs the workflow, also when its environment was not activated."""
+    folder = str(Path(sys.executable).parent)
+    path = os.environ.get("PATH", "").split(os.pathsep)
+    if path[0] != folder:
+        os.environ["PATH"] = os.pathsep.join([folder, *path])
