@@ -138,8 +138,11 @@ def _what_the_analyst_decided(study: Study) -> list[str]:
 def _fates(accounting: pd.DataFrame) -> PageTable:
     """Count rows by fate, who decided and reason; ledger reasons are told in the ledger's own table."""
     reason = np.where(accounting["decided_by"] == "ledger", "a decision of the ledger", accounting["reason"])
-    counts = accounting.assign(reason=reason).groupby(["fate", "decided_by", "reason"], sort=True).size()
-    rows = tuple((*map(str, key), str(count)) for key, count in counts.items())  # type: ignore[misc]
+    kinds = pd.DataFrame(
+        {"fate": accounting["fate"], "decided_by": accounting["decided_by"], "reason": reason}
+    )
+    counts = kinds.value_counts(sort=False).sort_index().reset_index()
+    rows = tuple(tuple(str(cell) for cell in row) for row in counts.to_numpy())
     return PageTable(
         "What became of the rows of the peaks table.",
         ("fate", "decided by", "reason", "rows"),

@@ -44,7 +44,7 @@ def load_config(study_file: Path) -> StudyConfig:
     node = _compose(_read_text(study_file, shown), shown)
     log = FaultLog()
     if node is None:
-        return StudyConfig()
+        return StudyConfig.model_validate({})
     if not isinstance(node, yaml.MappingNode):
         log.problem(
             "not_a_mapping", shown, "The study file holds no `key: value` lines.", "See `wrackline new`."
@@ -63,7 +63,7 @@ def load_config(study_file: Path) -> StudyConfig:
     except ValidationError as error:
         for fault in error.errors():
             _report(dict(fault), node, shown, log)
-        config = StudyConfig()
+        config = StudyConfig.model_validate({})
     log.stop_on_problems()
     return config
 

@@ -101,7 +101,7 @@ def _threshold_years(
     low, high, row = thresholds.low[span], thresholds.high[span], thresholds.row[span]
     for line in sorted(ledger.lines("threshold"), key=lambda line: ledger.water_year[line] > 0):
         flow = _flow_text(ledger.low[line], config)
-        gauge, year = ledger.gauge[line], int(ledger.water_year[line])
+        gauge, year = ledger.gauge[line], ledger.water_year[line]
         name = ledger.frame["gauge_id"].iloc[line]
         if year:
             wanted = year_key(gauge, year)
