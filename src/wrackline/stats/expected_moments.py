@@ -74,7 +74,7 @@ class CensoredSample:
         of_class = position[self.class_gauge]
         kept = of_class >= 0
         return CensoredSample(
-            *(getattr(self, name)[gauges] for name in _PER_GAUGE),
+            **{name: getattr(self, name)[gauges] for name in _PER_GAUGE},
             class_gauge=of_class[kept],
             class_low=self.class_low[kept],
             class_high=self.class_high[kept],
@@ -170,7 +170,7 @@ def compress_sample(gauge: ArrayLike, low: ArrayLike, high: ArrayLike, n_gauges:
         exact_count=count,
         exact_mean=mean,
         exact_squares=np.where(constant, 0.0, squares),
-        exact_cubes=np.bincount(own, weights=deviation**3, minlength=n_gauges),
+        exact_cubes=np.bincount(own, weights=deviation**3, minlength=n_gauges).astype(float),
         exact_smallest=smallest,
         exact_largest=largest,
         class_gauge=of_gauge[first],
@@ -292,7 +292,7 @@ def _update(sample: CensoredSample, theta: FloatArray) -> tuple[FloatArray, Floa
     n = n_exact + np.bincount(own, weights=years, minlength=g)
 
     def total(values: FloatArray) -> FloatArray:
-        return np.bincount(own, weights=years * values, minlength=g)
+        return np.bincount(own, weights=years * values, minlength=g).astype(float)
 
     first = mu_c + sd_c * moments[0]
     new_mu = (n_exact * sample.exact_mean + total(first)) / n
@@ -337,7 +337,7 @@ def _bound_step(x: FloatArray, step: FloatArray) -> FloatArray:
 
 
 def _identity(g: int) -> FloatArray:
-    return np.repeat(np.eye(3)[:, :, None], g, axis=2)
+    return np.array(np.repeat(np.eye(3)[:, :, None], g, axis=2), dtype=float)
 
 
 def _gather(

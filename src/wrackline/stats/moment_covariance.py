@@ -42,7 +42,7 @@ class ThresholdClasses:
 
     @property
     def total_years(self) -> FloatArray:
-        return np.bincount(self.gauge, weights=self.years, minlength=self.n_gauges)
+        return np.bincount(self.gauge, weights=self.years, minlength=self.n_gauges).astype(float)
 
     def keep_gauges(self, gauges: IntArray) -> ThresholdClasses:
         """Return the groups of the given gauge numbers (ascending), renumbered from 0."""
