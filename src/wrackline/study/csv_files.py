@@ -5,6 +5,7 @@ from __future__ import annotations
 import csv
 import io
 import re
+from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -51,7 +52,7 @@ class Sheet:
 
 
 def read_sheet(
-    path: Path, file: str, table: InputTable, attributes: tuple[str, ...], log: FaultLog
+    path: Path, file: str, table: InputTable, attributes: Mapping[str, bool], log: FaultLog
 ) -> Sheet | None:
     """Read one input table as text and check its columns; None when it cannot be used at all.
 
@@ -61,8 +62,8 @@ def read_sheet(
         Where it lies, and how the study names it.
     table : InputTable
         Which columns it must and may have.
-    attributes : tuple of str
-        Attribute columns that the study declares (for tables that take them).
+    attributes : mapping of str to bool
+        Attribute columns that the study declares, and whether it uses them (for tables that take them).
     """
     text = _decode(path.read_bytes(), file, log) if is_readable(path, file, log) else None
     if text is None:
@@ -73,30 +74,24 @@ def read_sheet(
     header = [name.strip() for name in lines[0]]
     if not _header_is_fair(header, lines[1:3], file, table, log):
         return None
-    numbered = [(row, line) for row, line in enumerate(lines[1:], start=2) if any(line)]
-    ragged = [(row, line) for row, line in numbered if len(line) != len(header)]
-    for row, line in ragged:
+    body = lines[1:]
+    filled = np.fromiter((any(line) for line in body), bool, len(body))
+    fits = np.fromiter((len(line) == len(header) for line in body), bool, len(body))
+    for at in np.flatnonzero(filled & ~fits):
         log.problem(
             "ragged_row",
             file,
-            f"The row has {len(line)} cells, the header {len(header)}.",
+            f"The row has {len(body[at])} cells, the header {len(header)}.",
             "Fill in or take out commas; put text that holds a comma in double quotes.",
-            row=row,
+            row=at + 2,
         )
-    if ragged:
-        numbered = [(row, line) for row, line in numbered if len(line) == len(header)]
-    elif not numbered:
-        tell = {"problem": log.problem, "warning": log.warning}.get(table.when_empty)
-        if tell is not None:
-            tell(
-                "no_rows", file, "The file has a header and no rows.", f"Add a row for every {table.row_is}."
-            )
-    columns = list(zip(*(line for _, line in numbered), strict=True)) or [()] * len(header)
-    sheet = Sheet(
-        file,
-        np.array([row for row, _ in numbered], dtype=np.int64),
-        {name: _stripped(column) for name, column in zip(header, columns, strict=True) if name},
-    )
+    tell = {"problem": log.problem, "warning": log.warning}.get(table.when_empty)
+    if not filled.any() and tell is not None:
+        tell("no_rows", file, "The file has a header and no rows.", f"Add a row for every {table.row_is}.")
+    kept = np.flatnonzero(filled & fits)
+    columns = list(zip(*(body[at] for at in kept.tolist()), strict=True)) or [()] * len(header)
+    cells = {name: _stripped(column) for name, column in zip(header, columns, strict=True) if name}
+    sheet = Sheet(file, kept + 2, cells)
     return sheet if _columns_are_fair(sheet, table, attributes, log) else None
 
 
@@ -221,21 +216,16 @@ def _header_is_fair(
     return not doubled
 
 
-def _columns_are_fair(sheet: Sheet, table: InputTable, attributes: tuple[str, ...], log: FaultLog) -> bool:
-    declared = attributes if table.takes_attributes else ()
+def _columns_are_fair(sheet: Sheet, table: InputTable, attributes: Mapping[str, bool], log: FaultLog) -> bool:
+    declared = attributes if table.takes_attributes else {}
     strangers = [name for name in sheet.cells if name not in table.names and name not in declared]
     fair = True
     for name in (*table.required, *declared):
         if name not in sheet:
             near = nearest_word(name, strangers)
-            log.problem(
-                "missing_column",
-                sheet.file,
-                "The column is missing.",
-                f"Is it '{near}'? Then rename that." if near else "Add it.",
-                row=1,
-                column=name,
-            )
+            tell = log.problem if declared.get(name, True) else log.warning
+            mend = f"Is it '{near}'? Then rename that." if near else "Add it."
+            tell("missing_column", sheet.file, "The column is missing.", mend, row=1, column=name)
             fair = fair and name in declared
             strangers = [stranger for stranger in strangers if stranger != near]
     unlike = []

@@ -108,8 +108,8 @@ class _Reading:
         regions = self._regions(gauges, targets)
         standing = Standing(
             gauge_ids=gauge_ids,
-            peak_keys=None if peaks is None else peaks.every_key,
-            threshold_keys=None if thresholds is None else thresholds.every_year()[0],
+            peak_keys=None if peaks is None or gauges is None or not peaks.rows_read else peaks.every_key,
+            threshold_keys=None if thresholds is None or gauges is None else thresholds.every_year()[0],
             regions=set() if gauges is None else set(gauges["region"]) - {""},
         )
         ledger = self._table(
@@ -125,7 +125,8 @@ class _Reading:
             and ledger
         ):
             built = build_records(gauge_ids, peaks, thresholds, periods, ledger, config, log)
-            self._check_enough(built, peaks)
+            if not any(fault.file == peaks.file for fault in log.problems):
+                self._check_enough(built, peaks)
         log.stop_on_problems()
         if gauges is None or gauge_ids is None or built is None or periods is None:
             raise AssertionError("a table is unusable and no problem was reported")
@@ -162,7 +163,9 @@ class _Reading:
                     column=f"inputs.{name}",
                 )
             return absent() if absent else None
-        sheet = read_sheet(self.folder / file, file, TABLES[name], tuple(self.config.attributes), self.log)
+        in_use = self.config.attributes_in_use
+        attributes = {attribute: attribute in in_use for attribute in self.config.attributes}
+        sheet = read_sheet(self.folder / file, file, TABLES[name], attributes, self.log)
         return None if sheet is None else check(sheet)
 
     def _basins(self, gauges: pd.DataFrame | None, targets: pd.DataFrame | None) -> GeoDataFrame | None:

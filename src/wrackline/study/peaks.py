@@ -39,6 +39,7 @@ class Peaks:
     """
 
     file: str
+    rows_read: int
     row: IntArray
     gauge: IntArray
     water_year: IntArray
@@ -69,6 +70,7 @@ def read_peaks(
     good = placed & flow_good & kind_good & cause_good & ~_repeated_years(sheet, gauge, year, placed, log)
     return Peaks(
         file=sheet.file,
+        rows_read=len(sheet),
         row=sheet.rows[good],
         gauge=gauge[good],
         water_year=year[good],
