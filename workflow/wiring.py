@@ -13,20 +13,34 @@ from typing import Any
 
 SOURCES = Path(__file__).resolve().parents[1] / "src"
 PACKAGE = "wrackline"
+DATA_ENDINGS = {".j2", ".css", ".js", ".yaml"}
 STAGES = ("intake", "screen", "dependence", "pool", "regress", "estimate", "publish")
 
 
 def stage_call(stage: str) -> str:
     """Return the shell command of a stage: its output goes to the screen and to the rule's log.
 
-    The stage runs from the sources beside this file, which are those that `source_digest` watches.
-    ``-P`` keeps files of the study's own folder from being taken for modules.
+    The command holds no place of a machine, so a study or a repository that moves is not run anew; `prepare_shell`
+    sets the two variables. ``-P`` keeps files of the study's own folder from being taken for modules.
     """
     place = f"[{STAGES.index(stage) + 1} of {len(STAGES)}] {stage} ..."
     return (
-        f"echo '{place}'; PYTHONPATH={{SOURCES:q}} python -P -m {PACKAGE}.stages.{stage} {{STUDY.name:q}}"
+        f'echo \'{place}\'; PYTHONPATH="$WRACKLINE_SOURCES" python -P -m {PACKAGE}.stages.{stage} "$WRACKLINE_STUDY"'
         " 2>&1 | tee {log:q}"
     )
+
+
+def prepare_shell(study: Path) -> None:
+    """Let stages find the study, the sources that `source_digest` watches, and the Python that runs the workflow.
+
+    The last also where its environment was not activated.
+    """
+    os.environ["WRACKLINE_SOURCES"] = str(SOURCES)
+    os.environ["WRACKLINE_STUDY"] = study.name
+    folder = str(Path(sys.executable).parent)
+    path = os.environ.get("PATH", "").split(os.pathsep)
+    if path[0] != folder:
+        os.environ["PATH"] = os.pathsep.join([folder, *path])
 
 
 def settings(config: Any, *parts: str) -> str:
@@ -45,21 +59,22 @@ def source_digest(stage: str) -> str:
 def stage_sources(stage: str) -> list[Path]:
     """List the files of the package that a stage uses, in order of name."""
     found: set[Path] = set()
-    waiting = [SOURCES / PACKAGE / "stages" / f"{stage}.py"]
+    waiting = _module_files(f"{PACKAGE}.stages.{stage}")
     while waiting:
         path = waiting.pop()
         if path in found or not path.is_file():
             continue
         found.add(path)
-        waiting.extend(_files_of(path))
+        if path.suffix == ".py":
+            waiting.extend(_files_of(path))
     return sorted(found)
 
 
 @cache
 def _files_of(path: Path) -> tuple[Path, ...]:
-    """Files that one module draws in: imported modules, their packages, and data files it names in its text."""
+    """Files that one module draws in: imported modules, their packages, and all data files beside it."""
     names: set[str] = set()
-    data: set[Path] = set()
+    data = {file for file in path.parent.iterdir() if file.suffix in DATA_ENDINGS}
     for node in ast.walk(ast.parse(path.read_bytes())):
         if isinstance(node, ast.Import):
             names.update(alias.name for alias in node.names)
@@ -67,10 +82,6 @@ def _files_of(path: Path) -> tuple[Path, ...]:
             origin = _absolute_name(path, node)
             names.add(origin)
             names.update(f"{origin}.{alias.name}" for alias in node.names)
-        elif isinstance(node, ast.Constant) and isinstance(node.value, str) and "\n" not in node.value:
-            beside = path.parent / node.value
-            if node.value and len(node.value) < 100 and beside.is_file():
-                data.add(beside)
     own = {name for name in names if name.split(".")[0] == PACKAGE}
     return tuple(sorted({file for name in own for file in _module_files(name)} | data))
 
@@ -87,11 +98,3 @@ def _module_files(name: str) -> list[Path]:
     steps = name.split(".")
     files = [SOURCES.joinpath(*steps[:depth], "__init__.py") for depth in range(1, len(steps) + 1)]
     return [file for file in [*files, SOURCES.joinpath(*steps).with_suffix(".py")] if file.is_file()]
-
-
-def use_this_python() -> None:
-    """Let stages find the Python that runs the workflow, also when its environment was not activated."""
-    folder = str(Path(sys.executable).parent)
-    path = os.environ.get("PATH", "").split(os.pathsep)
-    if path[0] != folder:
-        os.environ["PATH"] = os.pathsep.join([folder, *path])

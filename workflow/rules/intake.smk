@@ -15,6 +15,8 @@ rule intake:
         regions="work/intake/regions.csv",
         accounting="work/intake/accounting.csv",
         ledger="work/intake/ledger.csv",
+        periods="work/intake/periods.csv",
+        redundancy="work/intake/redundancy.csv",
     log:
         "work/logs/intake.log",
     conda:

@@ -1,19 +1,25 @@
-# Tables, maps, page and manifest: the only stage that writes results.
+# Tables, maps, page and manifest: the only stage that writes results. Earlier results stay as they are
+# until the new ones are whole, hence `update`.
 rule publish:
     input:
         contributions=expand("work/{stage}/contribution.json", stage=STAGES[:-1]),
+        gauges="work/intake/gauges.csv",
+        targets="work/intake/targets.csv",
+        basins="work/intake/basins.csv",
+        regions="work/intake/regions.csv",
+        records="work/screen/records.csv",
         study=STUDY.name.replace("{", "{{").replace("}", "}}"),
     output:
-        page=f"{RESULTS}/report.html",
-        manifest=f"{RESULTS}/manifest.json",
-        columns=f"{RESULTS}/tables/columns.csv",
-        map=f"{RESULTS}/maps/study.gpkg",
+        page=update(f"{RESULTS}/report.html"),
+        manifest=update(f"{RESULTS}/manifest.json"),
+        columns=update(f"{RESULTS}/tables/columns.csv"),
+        map=update(f"{RESULTS}/maps/study.gpkg"),
     log:
         "work/logs/publish.log",
     conda:
         "../envs/python.yaml"
     params:
-        settings=settings(CONFIG, "study", "units", "output"),
+        settings=settings(CONFIG, *type(CONFIG).model_fields),
         sources=source_digest("publish"),
     shell:
         stage_call("publish")

@@ -6,6 +6,8 @@ rule screen:
         basins="work/intake/basins.csv",
         accounting="work/intake/accounting.csv",
         ledger="work/intake/ledger.csv",
+        periods="work/intake/periods.csv",
+        redundancy="work/intake/redundancy.csv",
     output:
         contribution="work/screen/contribution.json",
         gauges="work/screen/gauges.csv",

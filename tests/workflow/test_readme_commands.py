@@ -1,0 +1,106 @@
+"""The README's commands are the ones that exist."""
+
+from __future__ import annotations
+
+import os
+import re
+import shlex
+import subprocess
+import sys
+from pathlib import Path
+
+import pytest
+
+import start
+
+
+@pytest.fixture(scope="module")
+def commands(repository: Path) -> list[str]:
+    """Lines of the README's blocks of commands, without comments."""
+    blocks = re.findall(
+        r"^```\n(.*?)^```$", (repository / "README.md").read_text(encoding="utf-8"), re.DOTALL | re.MULTILINE
+    )
+    return [line.split("#")[0].strip() for block in blocks for line in block.splitlines() if line.strip()]
+
+
+def test_readme_gives_the_two_commands_first(commands: list[str]) -> None:
+    assert commands[:2] == ["python3 workflow/start.py run", "python3 workflow/start.py test"]
+
+
+def test_every_start_command_of_the_readme_is_understood(
+    commands: list[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    own = [shlex.split(command) for command in commands if "workflow/start.py" in command]
+    assert len(own) >= 3
+    for words in own:
+        monkeypatch.setattr(sys, "argv", words[1:])
+        assert words[2] == start.read_arguments().command
+
+
+def test_start_needs_only_the_standard_library(repository: Path) -> None:
+    helped = subprocess.run(
+        [sys.executable, "-I", "-S", str(repository / "workflow" / "start.py"), "--help"],
+        capture_output=True,
+        text=True,
+    )
+    assert helped.returncode == 0, helped.stderr
+    assert "run" in helped.stdout
+    assert "test" in helped.stdout
+
+
+def test_snakemake_alone_finds_snakefile_and_profile_from_the_repositorys_root(
+    tmp_path: Path, repository: Path
+) -> None:
+    study = tmp_path / "study.yaml"
+    study.write_text("units: {flow: buckets}\n", encoding="utf-8")
+    run = subprocess.run(
+        [sys.executable, "-m", "snakemake", "--configfile", os.path.relpath(study, repository)],
+        cwd=repository,
+        capture_output=True,
+        text=True,
+    )
+    assert "workflow/profiles/default" in run.stderr
+    assert "value 'buckets'" in run.stderr
+    assert run.returncode == 1
+
+
+def test_environment_that_is_whole_is_not_set_up_again(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    done = []
+    monkeypatch.setattr(start, "ENVIRONMENT", tmp_path / ".venv")
+    monkeypatch.setattr(start, "MARK", tmp_path / ".venv" / "complete")
+    monkeypatch.setattr(
+        start, "make_environment", lambda: (tmp_path / ".venv").mkdir(exist_ok=True) or done.append("made")
+    )
+    monkeypatch.setattr(start, "install_packages", lambda: done.append("installed"))
+    start.set_up()
+    start.set_up()
+    assert done == ["made", "installed"]
+
+    start.MARK.write_text(start.environment_digest().split()[0] + " other-packages\n", encoding="utf-8")
+    start.set_up()
+    assert done == ["made", "installed", "installed"], "other packages: the environment itself stays"
+
+    start.MARK.unlink()
+    start.set_up()
+    assert done == ["made", "installed", "installed", "made", "installed"], "a broken-off set-up is redone"
+
+
+def test_missing_system_package_is_named(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(
+        start.importlib.util, "find_spec", lambda name: None if name == "ensurepip" else object()
+    )
+    monkeypatch.setattr(start, "ENVIRONMENT", tmp_path / ".venv")
+    with pytest.raises(SystemExit, match=r"apt-get install python3\.\d+-venv"):
+        start.make_environment()
+
+
+def test_exit_status_is_that_of_what_ran(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(start, "tool", lambda name: Path(sys.executable))
+    assert start.call([sys.executable, "-c", "raise SystemExit(7)"]) == 7
+    monkeypatch.setattr(start, "call", lambda command: 3 if "snakemake" in command else 5)
+    assert start.run_study(start.EXAMPLE, 1) == 3
+    assert start.run_tests(["-k", "nothing"]) == 5
+    monkeypatch.setattr(start, "call", lambda command: 0 if "pytest" in command else 1)
+    assert start.run_tests([]) == 1, "a failed check fails the command even when all tests pass"
