@@ -76,15 +76,6 @@ def format_aep(aep: float) -> str:
     return format_percent(aep, 6)
 
 
-def name_aep_column(aep: float) -> str:
-    """Name a column for an annual exceedance probability.
-
-    >>> name_aep_column(0.01), name_aep_column(0.002), name_aep_column(1e-5)
-    ('aep_0_01', 'aep_0_002', 'aep_0_00001')
-    """
-    return "aep_" + format(Decimal(repr(float(aep))), "f").replace(".", "_")
-
-
 def format_count(count: int) -> str:
     """Word a count, thousands parted.
 

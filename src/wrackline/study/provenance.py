@@ -55,6 +55,10 @@ class Run:
     software: dict[str, str]
     inputs: dict[str, dict[str, str]]
 
+    @classmethod
+    def from_manifest(cls, manifest: Mapping[str, Any]) -> Run:
+        return cls(manifest["run_digest"], manifest["software"], manifest["inputs"])
+
 
 def build_manifest(config: StudyConfig, study_file: Path, results: Path) -> dict[str, Any]:
     """Describe a finished run, from the files in ``results`` as they lie there.
@@ -135,7 +139,7 @@ def digest_inputs(config: StudyConfig, study_file: Path) -> dict[str, dict[str, 
                 value=name,
             )
             continue
-        found[name] = _describe(path)
+        found[name] = {"sha256": digest_file(path)}
     log.stop_on_problems()
     return found
 
