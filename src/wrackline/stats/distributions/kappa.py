@@ -8,7 +8,7 @@ from functools import lru_cache
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
-from scipy.special import psi
+from scipy.special import gammaln, psi
 
 from wrackline.stats.distributions._power_form import FloatArray, bend, broadcast_lmoments, split, unbend
 
@@ -20,6 +20,7 @@ _NODES, _NODE_WEIGHTS = np.polynomial.legendre.leggauss(10)
 _UNIT_NODES, _UNIT_WEIGHTS = (1 + _NODES) / 2, _NODE_WEIGHTS / 2
 _SHIFT = 5
 _STARTS = 4
+_LARGEST_SHAPE = 60.0
 _TOLERANCE = 1e-12
 
 
@@ -49,9 +50,9 @@ def fit(
     shapes[feasible] = _solve_shapes(t3[feasible], t4[feasible])
     k, h = shapes[..., 0], shapes[..., 1]
     with np.errstate(all="ignore"):
-        g = _reduced_moments(k, h)
-        scale = l2 / (g[1] - g[0])
-        return np.stack([l1 - scale * g[0], scale, k, h], axis=-1)
+        first, second, _, _ = _log_moments_over_k(k, h)
+        scale = l2 * np.exp(-k * first) / bend(first - second, k)
+        return np.stack([l1 - scale * bend(-first, k), scale, k, h], axis=-1)
 
 
 def quantile(parameters: ArrayLike, p: ArrayLike) -> FloatArray:
@@ -128,11 +129,14 @@ def _mean_digamma(z: FloatArray, k: FloatArray) -> FloatArray:
     )
     for j in range(_SHIFT):
         mean = mean - unbend(1 / (z + j), -k)
+    wide = np.abs(k) > 3
+    if np.any(wide):
+        mean = np.where(wide, (gammaln(z + k) - gammaln(z)) / np.where(wide, k, 1.0), mean)
     return np.asarray(mean)
 
 
-def _reduced_moments(k: FloatArray, h: FloatArray) -> list[FloatArray]:
-    """Return (1 - g_r) / k for r = 1..4, from which all L-moments are differences (smooth in k and h)."""
+def _log_moments_over_k(k: FloatArray, h: FloatArray) -> list[FloatArray]:
+    """Return ln(g_r) / k for r = 1..4, Hosking's moments of 1 - k (x - location) / scale."""
     at_zero = np.abs(h) < 1e-14
     size = np.where(at_zero, 1.0, np.abs(h))
     positive = h >= 0
@@ -142,26 +146,28 @@ def _reduced_moments(k: FloatArray, h: FloatArray) -> list[FloatArray]:
         z = np.where(positive, 1.0, 0.0) + r / size
         log_g_over_k = common - _mean_digamma(z, np.where(positive, k, -k))
         limit = common - np.log(r)
-        moments.append(bend(-np.where(at_zero, limit, log_g_over_k), k))
+        moments.append(np.where(at_zero, limit, log_g_over_k))
     return moments
 
 
 def _ratios(k: FloatArray, h: FloatArray) -> tuple[FloatArray, FloatArray]:
     with np.errstate(all="ignore"):
-        g1, g2, g3, g4 = _reduced_moments(k, h)
-        spread = g2 - g1
-        return (g1 - 3 * g2 + 2 * g3) / spread, (-g1 + 6 * g2 - 10 * g3 + 5 * g4) / spread
+        first, second, third, fourth = _log_moments_over_k(k, h)
+        # (g_1 - g_r) / (k g_1): no cancellation however small the g_r, smooth through k = 0.
+        d2, d3, d4 = bend(first - second, k), bend(first - third, k), bend(first - fourth, k)
+        return 2 * d3 / d2 - 3, 6 - (10 * d3 - 5 * d4) / d2
 
 
 def _allowed(k: FloatArray, h: FloatArray) -> NDArray[np.bool_]:
-    return (k > -1) & (h > -1) & ((h >= 0) | (h * k > -1)) & (k + 0.725 * h > -1)
+    unique = (k > -1) & (h > -1) & ((h >= 0) | (h * k > -1)) & (k + 0.725 * h > -1)
+    return unique & (k < _LARGEST_SHAPE) & (h < _LARGEST_SHAPE)
 
 
 @lru_cache(maxsize=1)
 def _start_grid() -> tuple[FloatArray, ...]:
     """Return shapes k, h and their L-moment ratios over the region of unique solutions."""
-    k_axis = np.concatenate([np.linspace(-0.98, 2.0, 61), np.geomspace(2.2, 60.0, 24)])
-    h_axis = np.concatenate([np.linspace(-0.999, 2.0, 61), np.geomspace(2.2, 60.0, 24)])
+    k_axis = np.concatenate([np.linspace(-0.98, 2.0, 61), np.geomspace(2.2, 40.0, 30)])
+    h_axis = np.concatenate([np.linspace(-0.999, 2.0, 61), np.geomspace(2.2, 40.0, 30)])
     k, h = (axis.ravel() for axis in np.meshgrid(k_axis, h_axis))
     keep = _allowed(k, h)
     k, h = k[keep], h[keep]
