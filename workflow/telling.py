@@ -12,6 +12,7 @@ CHATTER = (
     "Using shell:",
     "Select jobs to execute",
     "Execute ",
+    "Conda environments: ignored",
     "Complete log",
     "Elapsed time",
     "Shutting down",
