@@ -104,3 +104,15 @@ def test_exit_status_is_that_of_what_ran(monkeypatch: pytest.MonkeyPatch) -> Non
     assert start.run_tests(["-k", "nothing"]) == 5
     monkeypatch.setattr(start, "call", lambda command: 0 if "pytest" in command else 1)
     assert start.run_tests([]) == 1, "a failed check fails the command even when all tests pass"
+
+
+def test_every_wrackline_command_of_the_readme_exists(repository: Path) -> None:
+    from typer.testing import CliRunner
+
+    from wrackline.cli import app
+
+    text = (repository / "README.md").read_text(encoding="utf-8")
+    named = set(re.findall(r"bin/wrackline (\w+)", text))
+    assert {"new", "check"} <= named
+    for name in sorted(named):
+        assert 0 == CliRunner().invoke(app, [name, "--help"]).exit_code, name
