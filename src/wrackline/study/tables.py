@@ -90,7 +90,6 @@ def read_table(path: Path, text: tuple[str, ...] = ()) -> pd.DataFrame:
         keep_default_na=False,
         na_values={name: [""] for name in header if name not in as_text},
         encoding="utf-8",
-        float_precision="round_trip",
     )
     for name in as_text:
         frame[name] = [_without_apostrophe(value) for value in frame[name]]
