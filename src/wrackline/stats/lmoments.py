@@ -8,6 +8,7 @@ from dataclasses import dataclass
 from functools import lru_cache
 
 import numpy as np
+from numpy.lib.stride_tricks import as_strided
 from numpy.typing import ArrayLike, NDArray
 
 FloatArray = NDArray[np.float64]
@@ -127,7 +128,9 @@ def sample_lmoments(values: ArrayLike, offsets: ArrayLike) -> SampleLMoments:
         if n == 0:
             continue
         gauges = by_length[begin:end]
-        block = flat[starts[gauges, None] + np.arange(n)]
+        # Every window of n values as a view: picking rows from it copies whole records at a time.
+        windows = as_strided(flat, shape=(flat.size - n + 1, n), strides=flat.strides * 2, writeable=False)
+        block = windows[starts[gauges]]
         block.sort(axis=1)
         lmoments[gauges] = _lmoments_of_sorted(block)
     return _ratios(lengths, lmoments)
