@@ -2,14 +2,12 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
-from dataclasses import dataclass, replace
-
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from wrackline.hydrology.low_floods import LowFloods, screen_low_floods, set_apart_low_floods
+from wrackline.hydrology.low_floods import screen_low_floods, set_apart_low_floods
 from wrackline.hydrology.quantile_limits import standard_error_moments, student_limits
+from wrackline.hydrology.record_fits import RecordFits, SkewFit, add_warnings, choose_fit
 from wrackline.hydrology.records import PeakRecords
 from wrackline.stats.expected_moments import (
     CensoredSample,
@@ -26,7 +24,6 @@ from wrackline.stats.moment_covariance import (
 )
 from wrackline.stats.pearson3 import frequency_factor
 from wrackline.stats.skew_variance import (
-    POLYNOMIAL_LIMIT,
     skew_weight,
     station_skew_mse,
     weighted_skew_mse,
@@ -36,109 +33,8 @@ FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
 GAUGE_AEPS = (0.9, 0.8, 0.5, 0.2, 0.1, 0.04, 0.02, 0.01, 0.005, 0.002)
-FEW_PEAKS = 10
 _WEIGHT_TOLERANCE = 1e-10
 _MOST_WEIGHTINGS = 60
-
-
-@dataclass(frozen=True)
-class SkewFit:
-    """Log-Pearson III fits of all gauges with one kind of skew. All logarithms are of base 10 and flows in m3/s.
-
-    Attributes
-    ----------
-    moments : ExpectedMoments
-        Moments of the logarithms, shape (g,) each.
-    station_skew_mse : float array (g,)
-        Mean square error of the record's own skew: that of a complete record of as many years, times the ratio
-        of the asymptotic variances with and without censoring.
-    skew_mse : float array (g,)
-        Mean square error of the skew in use.
-    covariance : float array (g, 3, 3)
-        Sampling covariance of mean, variance and skew.
-    log10_quantile, log10_se : float arrays (g, a)
-        Logarithm of the flood quantile and its standard error.
-    log10_lower, log10_upper : float arrays (g, a)
-        Confidence limits.
-    """
-
-    moments: ExpectedMoments
-    station_skew_mse: FloatArray
-    skew_mse: FloatArray
-    covariance: FloatArray
-    log10_quantile: FloatArray
-    log10_se: FloatArray
-    log10_lower: FloatArray
-    log10_upper: FloatArray
-
-    @property
-    def flow(self) -> FloatArray:
-        """Flood quantiles in m3/s, shape (g, a)."""
-        return 10**self.log10_quantile
-
-    @property
-    def lower(self) -> FloatArray:
-        return 10**self.log10_lower
-
-    @property
-    def upper(self) -> FloatArray:
-        return 10**self.log10_upper
-
-
-@dataclass(frozen=True)
-class FitWarning:
-    """Something odd about the fit of one gauge."""
-
-    code: str
-    text: str
-
-
-@dataclass(frozen=True)
-class RecordFits:
-    """Everything that the records alone, and with a generalized skew, say about floods at their gauges.
-
-    Attributes
-    ----------
-    gauge_ids : tuple of str, length g
-    aeps : float array (a,)
-    confidence : float
-        Two-sided probability content of the limits.
-    n_peaks, n_historic : int arrays (g,)
-        Exactly known peaks of systematic gauging (low floods included) and of historic knowledge.
-    record_years : int array (g,)
-        Years in the fit, known exactly or as intervals.
-    low_floods : LowFloods
-    fitted_records : PeakRecords
-        The records as they entered the fit, low floods set apart.
-    station : SkewFit
-        With the record's own skew.
-    weighted : SkewFit or None
-        With the weighted skew; None when no generalized skew was given. NaN at gauges without one.
-    generalized_skew, generalized_skew_mse : float arrays (g,) or None
-    refusal : tuple of str, length g
-        Why there is no fit; empty where there is one.
-    warnings : tuple of tuple of FitWarning, length g
-    """
-
-    gauge_ids: tuple[str, ...]
-    aeps: FloatArray
-    confidence: float
-    n_peaks: IntArray
-    n_historic: IntArray
-    record_years: IntArray
-    low_floods: LowFloods
-    fitted_records: PeakRecords
-    station: SkewFit
-    weighted: SkewFit | None
-    generalized_skew: FloatArray | None
-    generalized_skew_mse: FloatArray | None
-    refusal: tuple[str, ...]
-    warnings: tuple[tuple[FitWarning, ...], ...]
-
-    @property
-    def best(self) -> SkewFit:
-        """The weighted fit where there is one, else the station fit."""
-        return self.station if self.weighted is None else self.weighted
 
 
 def fit_records(
@@ -190,22 +86,25 @@ def fit_records(
     g = records.n_gauges
     low_floods = screen_low_floods(records, low_flood_thresholds)
     fitted = set_apart_low_floods(records, low_floods.threshold)
-    fitted = fitted.keep_rows((fitted.flow_low > 0) | np.isfinite(fitted.flow_high))
+    # Years known only as 'some flood' say nothing, nor do zeros where there is no flood to set them below.
+    fitted = fitted.keep_rows((fitted.flow_low > 0) | (np.isfinite(fitted.flow_high) & (fitted.flow_high > 0)))
     sample, classes = describe_observation(fitted)
     moments = fit_expected_moments(sample, skew_bound=skew_bound)
-    refusal = tuple(low or own for low, own in zip(low_floods.refusal, moments.refusal, strict=True))
-    usable = np.array([not reason for reason in refusal], dtype=bool)
+    usable = np.array([not reason for reason in low_floods.refusal], dtype=bool)
     years = sample.years
     station = _describe_fit(moments, classes, years, aeps, confidence, usable)
 
     weighted = skew = mse = None
+    ratio = _censoring_ratio(classes, moments, years, np.flatnonzero(usable & moments.fitted))
     if generalized_skew is not None and generalized_skew_mse is not None:
         skew = np.broadcast_to(np.asarray(generalized_skew, dtype=float), (g,)).copy()
         mse = np.broadcast_to(np.asarray(generalized_skew_mse, dtype=float), (g,)).copy()
         has_skew = usable & np.isfinite(skew) & np.isfinite(mse)
-        moments, ratio = _fit_weighted(sample, classes, skew, mse, has_skew, station, skew_bound)
+        moments, ratio = _fit_weighted(sample, classes, skew, mse, has_skew, ratio, skew_bound)
         weighted = _describe_fit(moments, classes, years, aeps, confidence, has_skew, (skew, mse, ratio))
 
+    best = choose_fit(station, weighted, skew, mse)
+    refusal = tuple(low or own for low, own in zip(low_floods.refusal, best.moments.refusal, strict=True))
     exact, historic = records.exact & records.observed, records.historic
     own = records.gauge_index
     fits = RecordFits(
@@ -219,12 +118,13 @@ def fit_records(
         fitted_records=fitted,
         station=station,
         weighted=weighted,
+        censoring_ratio=ratio,
         generalized_skew=skew,
         generalized_skew_mse=mse,
         refusal=refusal,
         warnings=(),
     )
-    return _with_warnings(fits)
+    return add_warnings(fits)
 
 
 def describe_observation(records: PeakRecords) -> tuple[CensoredSample, ThresholdClasses]:
@@ -260,7 +160,7 @@ def _fit_weighted(
     skew: FloatArray,
     mse: FloatArray,
     usable: NDArray[np.bool_],
-    station: SkewFit,
+    ratio: FloatArray,
     skew_bound: float,
 ) -> tuple[ExpectedMoments, FloatArray]:
     """Fit with the weighted skew; the censoring's part in the station skew's error is settled from outside.
@@ -270,7 +170,7 @@ def _fit_weighted(
     g = sample.n_gauges
     years = sample.years
     gauges = np.flatnonzero(usable)
-    ratio = _censoring_ratio(classes, station.moments, years, gauges)
+    ratio = ratio.copy()
     total = {name: np.full(g, np.nan) for name in ("mean", "sd", "skew", "station_skew")}
     iterations, converged = np.zeros(g, dtype=np.int64), np.zeros(g, dtype=bool)
     clamped, beyond = np.zeros(g, dtype=bool), np.zeros(g, dtype=bool)
@@ -278,7 +178,7 @@ def _fit_weighted(
     for _ in range(_MOST_WEIGHTINGS):
         if not len(gauges):
             break
-        rule = _weighting(skew[gauges], mse[gauges], years[gauges], ratio[gauges])
+        rule = weighting(skew[gauges], mse[gauges], years[gauges], ratio[gauges])
         part = fit_expected_moments(sample.keep_gauges(gauges), rule, skew_bound=skew_bound)
         for name, values in total.items():
             values[gauges] = getattr(part, name)
@@ -302,7 +202,7 @@ def _fit_weighted(
     )  # fmt: skip
 
 
-def _weighting(skew: FloatArray, mse: FloatArray, years: IntArray, ratio: FloatArray) -> SkewRule:
+def weighting(skew: FloatArray, mse: FloatArray, years: IntArray, ratio: FloatArray) -> SkewRule:
     """Return the rule that weighs station skews with the generalized skew by their mean square errors."""
 
     def weigh(station: FloatArray, rows: IntArray) -> FloatArray:
@@ -371,51 +271,3 @@ def _describe_fit(
         log10_lower=spread(lower, a),
         log10_upper=spread(upper, a),
     )
-
-
-def _with_warnings(fits: RecordFits) -> RecordFits:
-    """Return the fits with what is odd about each gauge put into words."""
-    return replace(fits, warnings=tuple(tuple(_warn(fits, i)) for i in range(len(fits.gauge_ids))))
-
-
-def _warn(fits: RecordFits, i: int) -> Iterator[FitWarning]:
-    """What a reader of one gauge's results should know."""
-    low, station, best = fits.low_floods, fits.station, fits.best
-    if fits.refusal[i]:
-        yield FitWarning("not_fitted", fits.refusal[i])
-        return
-    n = int(fits.n_peaks[i] + fits.n_historic[i])
-    if n < FEW_PEAKS:
-        yield FitWarning("few_peaks", f"{n} exactly known peaks; common practice asks for {FEW_PEAKS}")
-    if low.count[i] > fits.n_peaks[i] / 2:
-        yield FitWarning(
-            "mostly_low_floods",
-            f"{low.count[i]} of {fits.n_peaks[i]} systematic peaks lie below the low-flood threshold",
-        )
-    if low.accurate_count[i] != low.count[i]:
-        yield FitWarning(
-            "low_flood_count_depends",
-            f"the low-flood test counts {low.count[i]} with the guideline's p-values, "
-            f"{low.accurate_count[i]} with accurate ones",
-        )
-    skew = station.moments.skew[i]
-    if abs(skew) > POLYNOMIAL_LIMIT:
-        yield FitWarning(
-            "large_skew",
-            f"station skew {skew:.2f} is beyond 1.41 in absolute value; its error is from simulation",
-        )
-    if station.moments.clamped[i]:
-        yield FitWarning("skew_clamped", "the bound on the station skew took effect")
-    if best.moments.beyond_support[i]:
-        yield FitWarning(
-            "peak_beyond_bound", "an exactly known peak lies beyond the bound of the fitted distribution"
-        )
-    if fits.weighted is not None and fits.generalized_skew is not None:
-        reason = fits.weighted.moments.refusal[i]
-        if reason:
-            yield FitWarning("not_weighted", f"no weighted skew: {reason}")
-        elif abs(skew - fits.generalized_skew[i]) > 0.5:
-            yield FitWarning(
-                "skews_differ",
-                f"station skew {skew:.2f} and generalized skew {fits.generalized_skew[i]:.2f} differ by more than 0.5",
-            )

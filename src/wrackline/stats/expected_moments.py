@@ -251,6 +251,7 @@ def _find_fixed_point(
     x = np.stack([np.zeros(g), np.ones(g), rule(np.zeros(g), active)])
     inverse = _identity(g)
     old_x = old_f = np.full((3, g), np.nan)
+    plain = np.ones(g, dtype=bool)
     for iteration in range(1, _MOST_ITERATIONS + 1):
         if not len(active):
             break
@@ -258,7 +259,7 @@ def _find_fixed_point(
         f[2] = rule(own_skew, active)
         f -= x
         if iteration > 1:
-            inverse, x, f, reset = _improve_inverse(inverse, x, f, old_x, old_f)
+            inverse, x, f, reset = _improve_inverse(inverse, x, f, old_x, old_f, plain)
         else:
             reset = np.zeros(len(active), dtype=bool)
         step = np.einsum("ijg,jg->ig", inverse, f)
@@ -268,7 +269,9 @@ def _find_fixed_point(
             theta[:, done], station[done] = (x + f)[:, small], own_skew[small]
             iterations[done], converged[done] = iteration, True
         old_x, old_f = x, f
-        x = _bound_step(x, step if iteration <= _ACCELERATED_ITERATIONS else f)
+        accelerate = iteration <= _ACCELERATED_ITERATIONS
+        plain = reset if accelerate else np.ones(len(active), dtype=bool)
+        x = _bound_step(x, step if accelerate else f)
         theta[:, active[~small]], station[active[~small]] = x[:, ~small], own_skew[~small]
         iterations[active[~small]] = iteration
         # Dropping finished gauges costs a copy, so it waits until enough of them have finished.
@@ -277,6 +280,7 @@ def _find_fixed_point(
             keep = np.flatnonzero(~finished)
             active, part = active[keep], part.keep_gauges(keep)
             x, old_x, old_f, inverse = x[:, keep], old_x[:, keep], old_f[:, keep], inverse[:, :, keep]
+            plain = plain[keep]
     return theta, station, iterations, converged
 
 
@@ -311,10 +315,13 @@ def _update(sample: CensoredSample, theta: FloatArray) -> tuple[FloatArray, Floa
 
 
 def _improve_inverse(
-    inverse: FloatArray, x: FloatArray, f: FloatArray, old_x: FloatArray, old_f: FloatArray
+    inverse: FloatArray, x: FloatArray, f: FloatArray, old_x: FloatArray, old_f: FloatArray, plain: BoolArray
 ) -> tuple[FloatArray, FloatArray, FloatArray, BoolArray]:
-    """Broyden's update of the inverse of ``1 - d update``; falls back to the plain update where it went astray."""
-    worse = np.abs(f).max(axis=0) > 2 * np.abs(old_f).max(axis=0)
+    """Broyden's update of the inverse of ``1 - d update``; falls back to the plain update where it went astray.
+
+    A plain step may pass through larger residuals on its way, so only accelerated steps are taken back.
+    """
+    worse = ~plain & (np.abs(f).max(axis=0) > 2 * np.abs(old_f).max(axis=0))
     dx, df = x - old_x, f - old_f
     inverse_df = np.einsum("ijg,jg->ig", inverse, df)
     dx_inverse = np.einsum("ig,ijg->jg", dx, inverse)
