@@ -75,7 +75,7 @@ def posterior_of_model_variance(
     -----
     Reis, Stedinger and Martins (2005, Water Resour. Res. 41, W10419). Composite Gauss-Legendre quadrature.
     """
-    nodes, node_weights = _quadrature(prior_rate)
+    nodes, node_weights = quadrature(prior_rate)
     if coefficients is None:
         trials = fit_trials(system, nodes)
         log_density = -0.5 * (trials.log_det_cover + trials.log_det_information + trials.squares)
@@ -98,7 +98,8 @@ def posterior_of_model_variance(
 
 
 @lru_cache(maxsize=8)
-def _quadrature(prior_rate: float) -> tuple[FloatArray, FloatArray]:
+def quadrature(prior_rate: float) -> tuple[FloatArray, FloatArray]:
+    """Nodes and weights for integrals over the model-error variance under an exponential prior of this rate."""
     ends = np.array(_PANELS) * 10.0 / prior_rate
     x, w = np.polynomial.legendre.leggauss(_NODES_PER_PANEL)
     half = np.diff(ends) / 2
