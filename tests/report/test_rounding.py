@@ -12,8 +12,8 @@ from wrackline.report.rounding import (
     format_interval,
     format_percent,
     format_significant,
-    name_aep_column,
 )
+from wrackline.study.study_layers import name_aep_column
 
 
 @pytest.mark.parametrize(

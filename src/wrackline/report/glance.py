@@ -38,9 +38,10 @@ def count_study(tables: Mapping[str, Table], n_gauges: int, n_targets: int) -> t
         verdicts = tests.frame["verdict"].map(plain).value_counts()
         words = ", ".join(f"{count} {verdict}" for verdict, count in sorted(verdicts.items()))
         counts.append(Count("Pools", len(tests.frame), None, words))
-    counts.append(
-        Count("Ungauged sites", _count_estimated(tables), n_targets, "estimated" if n_targets else "")
-    )
+    if "target_estimates" in tables and n_targets:
+        counts.append(Count("Ungauged sites estimated", _count_estimated(tables), n_targets))
+    elif n_targets:
+        counts.append(Count("Ungauged sites", n_targets))
     return tuple(counts)
 
 
@@ -89,8 +90,6 @@ def _peak(low: float, high: float, historic: bool) -> str:
 
 
 def _count_estimated(tables: Mapping[str, Table]) -> int:
-    if "target_estimates" not in tables:
-        return 0
     frame = tables["target_estimates"].frame
     return int(frame.loc[frame["adopted"].eq(True), "target_id"].nunique())
 

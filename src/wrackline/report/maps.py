@@ -76,8 +76,10 @@ def draw_study_map(
     figure.set_layout_engine("none")
     centre = _central_longitude(np.concatenate([gauges.longitude, targets.longitude]))
     east_gauges, east_targets = (_unwrap(place.longitude, centre) for place in (gauges, targets))
-    _draw_outlines(axes, basins, centre, color=MUTED, linewidth=0.5, alpha=0.55)
-    _draw_outlines(axes, regions, centre, color=INK, linewidth=1.1, alpha=0.75, linestyle=(0, (6, 3)))
+    _draw_outlines(axes, _rings(basins), centre, color=MUTED, linewidth=0.5, alpha=0.55)
+    _draw_outlines(
+        axes, _borders(regions), centre, color=INK, linewidth=1.1, alpha=0.75, linestyle=(0, (6, 3))
+    )
     _draw_gauges(axes, gauges, east_gauges, np.asarray(used, dtype=bool))
     _draw_targets(axes, targets, east_targets)
     _frame(figure, axes)
@@ -139,7 +141,7 @@ def _draw_targets(axes: Any, targets: Places, east: np.ndarray) -> None:
     axes.scatter(
         east,
         targets.latitude,
-        s=70,
+        s=46,
         marker="P",
         facecolors=PAPER,
         edgecolors=INK,
@@ -155,18 +157,28 @@ def _draw_targets(axes: Any, targets: Places, east: np.ndarray) -> None:
         )
 
 
-def _draw_outlines(axes: Any, shapes: tuple[Any, ...], centre: float, **look: Any) -> None:
+def _draw_outlines(axes: Any, lines: list[np.ndarray], centre: float, **look: Any) -> None:
     from matplotlib.collections import LineCollection
 
-    lines = [ring for shape in shapes if shape is not None for ring in _rings(shape)]
     if lines:
         unwrapped = [np.column_stack([_unwrap(line[:, 0], centre), line[:, 1]]) for line in lines]
         axes.add_collection(LineCollection(unwrapped, zorder=1, **look), autolim=True)
 
 
-def _rings(shape: Any) -> list[np.ndarray]:
-    parts = getattr(shape, "geoms", [shape])
+def _rings(shapes: tuple[Any, ...]) -> list[np.ndarray]:
+    parts = [part for shape in shapes if shape is not None for part in getattr(shape, "geoms", [shape])]
     return [np.asarray(part.exterior.coords)[:, :2] for part in parts if not part.is_empty]
+
+
+def _borders(shapes: tuple[Any, ...]) -> list[np.ndarray]:
+    """Outlines with each shared border once: dashes drawn twice would close to a full line."""
+    import shapely
+
+    rings = [shapely.LineString(ring) for ring in _rings(shapes)]
+    if not rings:
+        return []
+    merged = shapely.line_merge(shapely.union_all(rings))
+    return [np.asarray(line.coords) for line in getattr(merged, "geoms", [merged])]
 
 
 def _legible(text: str, instead: str, most: int = 40) -> str:

@@ -196,12 +196,13 @@ def render_page(page: StudyPage) -> str:
 
 
 def is_number(text: str) -> bool:
-    """Whether a cell reads as a number and is set flush right.
+    """Whether a cell reads as a number and is set flush right; ``0101`` is an identifier.
 
-    >>> [is_number(text) for text in ("1.20", "-3", "12 %", "G-01", "1 to 2", "")]
-    [True, True, True, False, False, False]
+    >>> [is_number(text) for text in ("1.20", "-3", "12 %", "G-01", "1 to 2", "0101", "")]
+    [True, True, True, False, False, False, False]
     """
-    return bool(_NUMBER.fullmatch(text.strip()))
+    bare = text.strip()
+    return bool(_NUMBER.fullmatch(bare)) and not re.match(r"0\d", bare)
 
 
 def number_columns(table: PageTable) -> list[bool]:
