@@ -48,9 +48,9 @@ def check(
     print_faults(found.problems, found.warnings)
     console = _console()
     if not found.problems:
-        console.print(f"{study}: {found.summary}", highlight=False, markup=False, soft_wrap=True)
+        _print_line(console, (f"{study}: {found.summary}", ""))
     verdict = f"{_counted(len(found.problems), 'problem')}, {_counted(len(found.warnings), 'warning')}."
-    console.print(Text(verdict, style="bold red" if found.problems else "bold green"))
+    _print_line(console, (verdict, "bold red" if found.problems else "bold green"))
     raise typer.Exit(found.exit_status)
 
 
@@ -78,14 +78,19 @@ def print_faults(
     console = _console(to_stderr=to_stderr)
     for faults, word, style in ((problems, "", "red"), (warnings, "warning: ", "yellow")):
         for file, group in groupby(faults, key=lambda fault: fault.file):
-            console.print(Text(file, style="bold"), soft_wrap=True)
+            _print_line(console, (file, "bold"))
             for fault in group:
-                line = Text("  ")
-                line.append(word + _place(fault), style=style)
-                line.append(fault.problem)
-                if fault.mend:
-                    line.append(f" {fault.mend}", style="italic")
-                console.print(line, soft_wrap=True)
+                mend = f" {fault.mend}" if fault.mend else ""
+                place = ("  " + word + _place(fault), style)
+                _print_line(console, place, (fault.problem, ""), (mend, "italic"))
+
+
+def _print_line(console: Console, *parts: tuple[str, str]) -> None:
+    """Print styled parts; away from a terminal as bare text, which is quick for a million faults."""
+    if console.is_terminal:
+        console.print(Text.assemble(*parts), soft_wrap=True)
+    else:
+        print("".join(text for text, _ in parts), file=console.file)
 
 
 def main() -> None:

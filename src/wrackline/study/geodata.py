@@ -21,6 +21,8 @@ AREA_WARNING, AREA_PROBLEM = 0.10, 0.50
 
 Areas of one basin from maps and from elevation models commonly differ by a few per cent; beyond 10 % one of
 the two is usually wrong. Half as much again, or half, is another basin or another unit."""
+OUTLET_KM = 2.0
+"""Distance of an outlet from its basin's polygon that generalised lines and rounded coordinates explain."""
 
 
 def read_polygons(path: Path, file: str, layer: str, column: str, log: FaultLog) -> GeoDataFrame | None:
@@ -121,8 +123,7 @@ def measure_basins(basins: GeoDataFrame) -> pd.DataFrame:
     """
     import geopandas
 
-    west, south, east, north = basins.total_bounds
-    middle = f"+proj=laea +lat_0={(south + north) / 2} +lon_0={(west + east) / 2} +datum=WGS84 +units=m"
+    middle = _equal_area_about(basins)
     flat = basins.geometry.to_crs(middle)
     centroid = geopandas.GeoSeries(flat.centroid, crs=middle).to_crs(4326)
     return pd.DataFrame(
@@ -133,6 +134,39 @@ def measure_basins(basins: GeoDataFrame) -> pd.DataFrame:
         },
         index=basins["site_id"].to_numpy(),
     )
+
+
+def _equal_area_about(basins: GeoDataFrame) -> str:
+    west, south, east, north = basins.total_bounds
+    return f"+proj=laea +lat_0={(south + north) / 2} +lon_0={(west + east) / 2} +datum=WGS84 +units=m"
+
+
+def compare_outlets(
+    basins: GeoDataFrame, sites: pd.DataFrame, id_column: str, file: str, log: FaultLog
+) -> None:
+    """Warn of sites that lie clearly off their own basin's polygon."""
+    import geopandas
+
+    placed = sites[sites["latitude"].notna() & sites["longitude"].notna()]
+    paired = placed.merge(basins, left_on=id_column, right_on="site_id")
+    if paired.empty:
+        return
+    plane = _equal_area_about(basins)
+    points = geopandas.points_from_xy(paired["longitude"], paired["latitude"], crs=4326)
+    outlets = geopandas.GeoSeries(points).to_crs(plane)
+    shapes = geopandas.GeoSeries(paired["geometry"].to_numpy(), crs=4326).to_crs(plane)
+    off_km = outlets.distance(shapes).to_numpy() / 1e3
+    allowed_km = np.maximum(OUTLET_KM, 0.1 * np.sqrt(shapes.area.to_numpy() / 1e6))
+    for at in np.flatnonzero(off_km > allowed_km):
+        log.warning(
+            "outlet_off_basin",
+            file,
+            f"The site lies {off_km[at]:.3g} km outside its own basin's polygon.",
+            "Check its coordinates and the polygon's site_id.",
+            row=paired["row"].iloc[at],
+            column=id_column,
+            value=paired[id_column].iloc[at],
+        )
 
 
 def compare_areas(

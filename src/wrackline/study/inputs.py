@@ -14,7 +14,7 @@ from wrackline.hydrology.records import PeakRecords
 from wrackline.study.config import StudyConfig
 from wrackline.study.csv_files import Sheet, read_sheet
 from wrackline.study.faults import Fault, FaultLog
-from wrackline.study.ledger import Standing, empty_ledger, read_ledger, read_redundancy
+from wrackline.study.ledger import Ledger, Standing, empty_ledger, read_ledger, read_redundancy
 from wrackline.study.loading import line_of, load_config
 from wrackline.study.peaks import Peaks, read_peaks
 from wrackline.study.record_building import BuiltRecords, build_records
@@ -126,7 +126,7 @@ class _Reading:
         ):
             built = build_records(gauge_ids, peaks, thresholds, periods, ledger, config, log)
             if not any(fault.file == peaks.file for fault in log.problems):
-                self._check_enough(built, peaks)
+                self._check_enough(built, peaks, ledger)
         log.stop_on_problems()
         if gauges is None or gauge_ids is None or built is None or periods is None:
             raise AssertionError("a table is unusable and no problem was reported")
@@ -169,7 +169,13 @@ class _Reading:
         return None if sheet is None else check(sheet)
 
     def _basins(self, gauges: pd.DataFrame | None, targets: pd.DataFrame | None) -> GeoDataFrame | None:
-        from wrackline.study.geodata import check_basins, compare_areas, measure_basins, read_polygons
+        from wrackline.study.geodata import (
+            check_basins,
+            compare_areas,
+            compare_outlets,
+            measure_basins,
+            read_polygons,
+        )
 
         config, log = self.config, self.log
         tables = [(gauges, "gauge_id", config.inputs.gauges), (targets, "target_id", config.inputs.targets)]
@@ -184,7 +190,8 @@ class _Reading:
             measures = measure_basins(basins) if len(basins) else None
         for table, id_column, file in tables:
             if table is not None:
-                if measures is not None:
+                if measures is not None and basins is not None:
+                    compare_outlets(basins, table, id_column, file, log)
                     compare_areas(measures, table, id_column, file, config.units.area, log)
                 _place_centroids(table, id_column, measures, file, log)
         return basins
@@ -241,7 +248,9 @@ class _Reading:
             return
         lack = "has no region" if by_column else "lies in no region's polygon"
         known = set() if gauges is None else set(gauges["region"])
-        for site, region, row in zip(table[id_column], table["region"], table["row"], strict=True):
+        placed = table[table["latitude"].notna() & table["longitude"].notna()]
+        told = table if by_column else placed
+        for site, region, row in zip(told[id_column], told["region"], told["row"], strict=True):
             place: dict[str, Any] = {"row": row, "column": "region" if by_column else id_column}
             if region == "" and id_column == "gauge_id":
                 mend = "Give it a region if it should be pooled."
@@ -271,7 +280,7 @@ class _Reading:
                     value=move.gauge_id,
                 )
 
-    def _check_enough(self, built: BuiltRecords, peaks: Peaks) -> None:
+    def _check_enough(self, built: BuiltRecords, peaks: Peaks, ledger: Ledger) -> None:
         records, log = built.records, self.log
         with_rows = np.zeros(records.n_gauges, dtype=bool)
         with_rows[peaks.every_key // YEAR_STEP] = True
@@ -286,6 +295,9 @@ class _Reading:
             )
         fewest = self.config.screening.minimum_peaks if "short_record" in self.config.screening.exclude else 3
         exact = np.bincount(records.gauge_index[records.systematic_exact], minlength=records.n_gauges)
+        for line in ledger.lines("gauge"):
+            if ledger.frame["action"].iloc[line] == "exclude":
+                exact[ledger.gauge[line]] = 0
         usable = int((exact >= fewest).sum())
         if usable < FEWEST_GAUGES and records.n_gauges:
             log.problem(

@@ -56,6 +56,7 @@ def read_targets(
 
 def _read_sites(sheet: Sheet, id_column: str, config: StudyConfig, log: FaultLog) -> pd.DataFrame:
     stands = identifiers(sheet, id_column, log)
+    _warn_of_twins(sheet, id_column, stands, log)
     name = sheet.text("name")
     report(log, sheet, blank(name), "name", "blank", "The site has no name.", "Name it.", warn=True)
     latitude, longitude = _coordinates(sheet, "", log, required=True)
@@ -86,6 +87,25 @@ def _read_sites(sheet: Sheet, id_column: str, config: StudyConfig, log: FaultLog
     columns["row"] = sheet.rows
     frame = pd.DataFrame(columns)
     return frame[stands].sort_values(id_column, kind="stable").reset_index(drop=True)
+
+
+def _warn_of_twins(sheet: Sheet, id_column: str, stands: BoolArray, log: FaultLog) -> None:
+    """Warn of identifiers that differ in leading zeros alone: one of them may have lost its own."""
+    rows_of: dict[str, list[int]] = {}
+    for at in np.flatnonzero(stands):
+        if sheet.text(id_column)[at].isdigit():
+            rows_of.setdefault(sheet.text(id_column)[at].lstrip("0"), []).append(int(at))
+    for first, *others in rows_of.values():
+        for twin in others:
+            log.warning(
+                "leading_zero_twins",
+                sheet.file,
+                f"The identifier differs from that of row {sheet.rows[first]} in leading zeros alone.",
+                "Are they two sites? If not, take one out.",
+                row=sheet.rows[twin],
+                column=id_column,
+                value=sheet.text(id_column)[twin],
+            )
 
 
 def _contributing_area(sheet: Sheet, area: FloatArray, log: FaultLog) -> FloatArray:
