@@ -31,7 +31,9 @@ AEPS = np.array([0.1, 0.01, 0.002])
 MEAN, SD = 2.0, 0.3
 
 
-def simulate_records(skew: float, years: int, below: float, historic: int, replicates: int, seed: int) -> PeakRecords:
+def simulate_records(
+    skew: float, years: int, below: float, historic: int, replicates: int, seed: int
+) -> PeakRecords:
     """Draw replicates of one gauge as gauges of one batch."""
     stream = random_stream(seed, "coverage", f"{skew} {years} {below} {historic}")
     total = years + historic
@@ -67,10 +69,14 @@ def measure_misses(fit: SkewFit, skew: float) -> tuple[np.ndarray, np.ndarray, i
     return above, under, int(made.sum())
 
 
-def measure(replicates: int, generalized_mse: float, seed: int = 1, cells: object = None) -> list[dict[str, object]]:
+def measure(
+    replicates: int, generalized_mse: float, seed: int = 1, cells: object = None
+) -> list[dict[str, object]]:
     """Coverage table: a row per skew, record, kind of skew and probability."""
     rows: list[dict[str, object]] = []
-    for skew, years, below, historic in cells or itertools.product(SKEWS, YEARS, SHARES_BELOW, HISTORIC_YEARS):
+    for skew, years, below, historic in cells or itertools.product(
+        SKEWS, YEARS, SHARES_BELOW, HISTORIC_YEARS
+    ):
         records = simulate_records(skew, years, below, historic, replicates, seed)
         stream = random_stream(seed, "generalized_skew", f"{skew} {years} {below} {historic}")
         generalized = skew + np.sqrt(generalized_mse) * stream.standard_normal(replicates)

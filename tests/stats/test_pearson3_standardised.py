@@ -41,7 +41,9 @@ def test_factors_of_the_table_from_minus_three_to_three(skew):
 @given(AEPS, SKEWS)
 def test_factor_changes_sign_with_skew_and_tail(aep, skew):
     # 1 - aep loses digits that the flat end of a strongly skewed curve magnifies.
-    assert float(-frequency_factor(1 - aep, -skew)) == pytest.approx(float(frequency_factor(aep, skew)), abs=1e-8)
+    assert float(-frequency_factor(1 - aep, -skew)) == pytest.approx(
+        float(frequency_factor(aep, skew)), abs=1e-8
+    )
 
 
 @given(AEPS, SKEWS)
@@ -55,7 +57,9 @@ def test_factor_and_probability_are_continuous_where_the_expansion_takes_over(at
     w = np.linspace(-4, 4, 17)
     for function, argument in ((frequency_factor, aep), (cdf, w), (sf, w), (pdf, w)):
         step = 1e-9
-        np.testing.assert_allclose(function(argument, at - step), function(argument, at + step), rtol=0, atol=1e-8)
+        np.testing.assert_allclose(
+            function(argument, at - step), function(argument, at + step), rtol=0, atol=1e-8
+        )
 
 
 def test_zero_skew_is_the_normal_distribution():

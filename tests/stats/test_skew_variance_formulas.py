@@ -16,7 +16,9 @@ from wrackline.stats.skew_variance import (
 )
 from wrackline.stats.streams import random_stream
 
-TABLE = json.loads((Path(__file__).parents[1] / "reference" / "at_site_tables.json").read_text())["station_skew_mse"]
+TABLE = json.loads((Path(__file__).parents[1] / "reference" / "at_site_tables.json").read_text())[
+    "station_skew_mse"
+]
 
 
 def test_both_formulas_reproduce_their_computed_table_to_its_four_decimals():
@@ -37,7 +39,9 @@ def test_polynomial_is_the_variance_that_simulation_finds():
     # 40,000 samples: standard error of a variance about 1 %; 3 % allows for the fit of the polynomial.
     for row in TABLE["monte_carlo"]:
         if "var" in row:
-            assert row["var"] == pytest.approx(float(griffis_stedinger_variance(row["n"], row["skew"])), rel=0.03)
+            assert row["var"] == pytest.approx(
+                float(griffis_stedinger_variance(row["n"], row["skew"])), rel=0.03
+            )
 
 
 def test_large_skews_get_the_simulated_error_not_the_polynomial():

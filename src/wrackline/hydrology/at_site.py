@@ -9,13 +9,8 @@ from wrackline.hydrology.low_floods import screen_low_floods, set_apart_low_floo
 from wrackline.hydrology.quantile_limits import standard_error_moments, student_limits
 from wrackline.hydrology.record_fits import RecordFits, SkewFit, add_warnings, choose_fit
 from wrackline.hydrology.records import PeakRecords
-from wrackline.stats.expected_moments import (
-    CensoredSample,
-    ExpectedMoments,
-    SkewRule,
-    compress_sample,
-    fit_expected_moments,
-)
+from wrackline.stats.censored_sample import CensoredSample, compress_sample
+from wrackline.stats.expected_moments import ExpectedMoments, SkewRule, fit_expected_moments
 from wrackline.stats.moment_covariance import (
     ThresholdClasses,
     complete_skew_variance,
@@ -87,7 +82,9 @@ def fit_records(
     low_floods = screen_low_floods(records, low_flood_thresholds)
     fitted = set_apart_low_floods(records, low_floods.threshold)
     # Years known only as 'some flood' say nothing, nor do zeros where there is no flood to set them below.
-    fitted = fitted.keep_rows((fitted.flow_low > 0) | (np.isfinite(fitted.flow_high) & (fitted.flow_high > 0)))
+    fitted = fitted.keep_rows(
+        (fitted.flow_low > 0) | (np.isfinite(fitted.flow_high) & (fitted.flow_high > 0))
+    )
     sample, classes = describe_observation(fitted)
     moments = fit_expected_moments(sample, skew_bound=skew_bound)
     usable = np.array([not reason for reason in low_floods.refusal], dtype=bool)

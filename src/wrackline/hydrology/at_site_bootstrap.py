@@ -9,7 +9,8 @@ from numpy.typing import NDArray
 
 from wrackline.hydrology.at_site import describe_observation, weighting
 from wrackline.hydrology.record_fits import RecordFits
-from wrackline.stats.expected_moments import CensoredSample, ExpectedMoments, fit_expected_moments
+from wrackline.stats.censored_sample import CensoredSample
+from wrackline.stats.expected_moments import ExpectedMoments, fit_expected_moments
 from wrackline.stats.moment_covariance import ThresholdClasses
 from wrackline.stats.pearson3 import EXPANSION_SKEW, frequency_factor
 

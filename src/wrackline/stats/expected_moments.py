@@ -6,8 +6,9 @@ from collections.abc import Callable
 from dataclasses import dataclass, replace
 
 import numpy as np
-from numpy.typing import ArrayLike, NDArray
+from numpy.typing import NDArray
 
+from wrackline.stats.censored_sample import CensoredSample
 from wrackline.stats.pearson3 import conditional_moments, support
 
 FloatArray = NDArray[np.float64]
@@ -17,79 +18,9 @@ SkewRule = Callable[[FloatArray, IntArray], FloatArray]
 
 LARGEST_SKEW = 3.0
 _ITERATION_SKEW = 9.0
-_ACCELERATED_ITERATIONS = 150
+_ACCELERATED_ITERATIONS = 60
+_NEWTON_ITERATIONS = 30
 _MOST_ITERATIONS = 5000
-
-
-@dataclass(frozen=True)
-class CensoredSample:
-    """Records of many gauges, reduced to what the fit needs of them.
-
-    Attributes
-    ----------
-    exact_count : int array (g,)
-        Number of exactly known values.
-    exact_mean : float array (g,)
-    exact_squares, exact_cubes : float arrays (g,)
-        Sums of squares and cubes of deviations from `exact_mean`.
-    exact_smallest, exact_largest : float arrays (g,)
-    class_gauge : int array (c,)
-        Gauge of every class of censored years, ascending.
-    class_low, class_high : float arrays (c,)
-        Interval of the class; ``-inf`` and ``inf`` where open.
-    class_years : int array (c,)
-        Number of years of that gauge with that very interval.
-    """
-
-    exact_count: IntArray
-    exact_mean: FloatArray
-    exact_squares: FloatArray
-    exact_cubes: FloatArray
-    exact_smallest: FloatArray
-    exact_largest: FloatArray
-    class_gauge: IntArray
-    class_low: FloatArray
-    class_high: FloatArray
-    class_years: IntArray
-
-    @property
-    def n_gauges(self) -> int:
-        return len(self.exact_count)
-
-    @property
-    def years(self) -> IntArray:
-        """Years in the fit, exact and censored, shape (g,)."""
-        censored = np.bincount(self.class_gauge, weights=self.class_years, minlength=self.n_gauges)
-        return self.exact_count + censored.astype(np.int64)
-
-    @property
-    def exact_sd(self) -> FloatArray:
-        """Standard deviation of the exact values (divisor n - 1), shape (g,)."""
-        return np.sqrt(self.exact_squares / np.maximum(self.exact_count - 1, 1))
-
-    def keep_gauges(self, gauges: IntArray) -> CensoredSample:
-        """Return the sample of the given gauge numbers (ascending), renumbered from 0."""
-        position = np.full(self.n_gauges, -1, dtype=np.int64)
-        position[gauges] = np.arange(len(gauges))
-        of_class = position[self.class_gauge]
-        kept = of_class >= 0
-        return CensoredSample(
-            **{name: getattr(self, name)[gauges] for name in _PER_GAUGE},
-            class_gauge=of_class[kept],
-            class_low=self.class_low[kept],
-            class_high=self.class_high[kept],
-            class_years=self.class_years[kept],
-        )
-
-
-_PER_GAUGE = (
-    "exact_count",
-    "exact_mean",
-    "exact_squares",
-    "exact_cubes",
-    "exact_smallest",
-    "exact_largest",
-)
 
 
 @dataclass(frozen=True)
@@ -127,57 +58,6 @@ class ExpectedMoments:
     @property
     def fitted(self) -> BoolArray:
         return np.isfinite(self.mean)
-
-
-def compress_sample(gauge: ArrayLike, low: ArrayLike, high: ArrayLike, n_gauges: int) -> CensoredSample:
-    """Reduce records to sums over exact values and counts over distinct censoring intervals.
-
-    Parameters
-    ----------
-    gauge : int array (m,)
-        Gauge number of every year.
-    low, high : float arrays (m,)
-        The value of the year (a logarithm of flow) lies in ``[low, high]``; equal where known exactly.
-    n_gauges : int
-
-    Notes
-    -----
-    Years with the interval ``(-inf, inf)`` say nothing and are left out.
-    """
-    gauge, low, high = np.asarray(gauge, np.int64), np.asarray(low, float), np.asarray(high, float)
-    exact = low == high
-    own, x = gauge[exact], low[exact]
-    count = np.bincount(own, minlength=n_gauges)
-    mean = np.bincount(own, weights=x, minlength=n_gauges) / np.maximum(count, 1)
-    deviation = x - mean[own]
-    # A second pass removes the rounding of the first, so that equal values have no spread at all.
-    shift = np.bincount(own, weights=deviation, minlength=n_gauges) / np.maximum(count, 1)
-    mean, deviation = mean + shift, deviation - shift[own]
-    smallest, largest = np.full(n_gauges, np.inf), np.full(n_gauges, -np.inf)
-    np.minimum.at(smallest, own, x)
-    np.maximum.at(largest, own, x)
-    constant = largest <= smallest
-    squares = np.bincount(own, weights=deviation**2, minlength=n_gauges)
-
-    censored = ~exact & ~(np.isneginf(low) & np.isposinf(high))
-    of_gauge, from_low, to_high = gauge[censored], low[censored], high[censored]
-    order = np.lexsort((to_high, from_low, of_gauge))
-    of_gauge, from_low, to_high = of_gauge[order], from_low[order], to_high[order]
-    new = np.ones(len(order), dtype=bool)
-    new[1:] = (np.diff(of_gauge) != 0) | (from_low[1:] != from_low[:-1]) | (to_high[1:] != to_high[:-1])
-    first = np.flatnonzero(new)
-    return CensoredSample(
-        exact_count=count,
-        exact_mean=mean,
-        exact_squares=np.where(constant, 0.0, squares),
-        exact_cubes=np.bincount(own, weights=deviation**3, minlength=n_gauges).astype(float),
-        exact_smallest=smallest,
-        exact_largest=largest,
-        class_gauge=of_gauge[first],
-        class_low=from_low[first],
-        class_high=to_high[first],
-        class_years=np.diff(np.append(first, len(order))),
-    )
 
 
 def fit_expected_moments(
@@ -245,43 +125,101 @@ def _find_fixed_point(
 ) -> tuple[FloatArray, FloatArray, IntArray, BoolArray]:
     """Solve ``update(theta) = theta`` for every gauge; theta is (mean, sd, skew) as rows (3, g)."""
     g = sample.n_gauges
-    theta, station = np.zeros((3, g)), np.zeros(g)
-    iterations, converged = np.zeros(g, dtype=np.int64), np.zeros(g, dtype=bool)
-    active, part = np.arange(g), sample
-    x = np.stack([np.zeros(g), np.ones(g), rule(np.zeros(g), active)])
-    inverse = _identity(g)
-    old_x = old_f = np.full((3, g), np.nan)
-    plain = np.ones(g, dtype=bool)
-    for iteration in range(1, _MOST_ITERATIONS + 1):
-        if not len(active):
-            break
-        f, own_skew = _update(part, x)
-        f[2] = rule(own_skew, active)
-        f -= x
-        if iteration > 1:
+    every = np.arange(g)
+    start = np.stack([np.zeros(g), np.ones(g), rule(np.zeros(g), every)])
+    state = _State(start.copy(), np.zeros(g), np.zeros(g, dtype=np.int64), np.zeros(g, dtype=bool))
+    _accelerate(sample, rule, tolerance, state, every, _ACCELERATED_ITERATIONS)
+    if not state.converged.all():
+        _finish_by_newton(sample, rule, tolerance, state, np.flatnonzero(~state.converged))
+    left = np.flatnonzero(~state.converged)
+    if len(left):
+        # The plain iteration is slow but hardly ever fails, from its own start.
+        state.theta[:, left] = start[:, left]
+        _accelerate(sample, rule, tolerance, state, left, _MOST_ITERATIONS, accelerated=False)
+    return state.theta, state.station, state.iterations, state.converged
+
+
+@dataclass
+class _State:
+    """Where the search stands: theta (3, g) and, per gauge, station skew, evaluations and success."""
+
+    theta: FloatArray
+    station: FloatArray
+    iterations: IntArray
+    converged: BoolArray
+
+
+def _accelerate(
+    sample: CensoredSample,
+    rule: SkewRule,
+    tolerance: float,
+    state: _State,
+    active: IntArray,
+    limit: int,
+    accelerated: bool = True,
+) -> None:
+    """Iterate the active gauges by Broyden's method, or plainly with Broyden's estimate of the error."""
+    part, x = sample.keep_gauges(active), state.theta[:, active]
+    inverse = _identity(len(active))
+    old_x = old_f = np.full(x.shape, np.nan)
+    plain = reset = np.zeros(len(active), dtype=bool)
+    for iteration in range(limit):
+        f, own_skew = _residual(part, rule, active, x)
+        state.iterations[active] += 1
+        if iteration:
             inverse, x, f, reset = _improve_inverse(inverse, x, f, old_x, old_f, plain)
-        else:
-            reset = np.zeros(len(active), dtype=bool)
         step = np.einsum("ijg,jg->ig", inverse, f)
         small = (np.abs(f).max(axis=0) < tolerance) & (np.abs(step).max(axis=0) < tolerance) & ~reset
-        if small.any():
-            done = active[small]
-            theta[:, done], station[done] = (x + f)[:, small], own_skew[small]
-            iterations[done], converged[done] = iteration, True
+        state.theta[:, active], state.station[active] = np.where(small, x + f, x), own_skew
+        state.converged[active] = small
         old_x, old_f = x, f
-        accelerate = iteration <= _ACCELERATED_ITERATIONS
-        plain = reset if accelerate else np.ones(len(active), dtype=bool)
-        x = _bound_step(x, step if accelerate else f)
-        theta[:, active[~small]], station[active[~small]] = x[:, ~small], own_skew[~small]
-        iterations[active[~small]] = iteration
-        # Dropping finished gauges costs a copy, so it waits until enough of them have finished.
+        plain = reset if accelerated else np.ones(len(active), dtype=bool)
+        x = _bound_step(x, step if accelerated else f)
         if small.any():
-            finished = converged[active]
-            keep = np.flatnonzero(~finished)
-            active, part = active[keep], part.keep_gauges(keep)
+            keep = np.flatnonzero(~small)
+            if not len(keep):
+                return
+            active, part, plain, reset = active[keep], part.keep_gauges(keep), plain[keep], reset[keep]
             x, old_x, old_f, inverse = x[:, keep], old_x[:, keep], old_f[:, keep], inverse[:, :, keep]
-            plain = plain[keep]
-    return theta, station, iterations, converged
+
+
+def _finish_by_newton(
+    sample: CensoredSample, rule: SkewRule, tolerance: float, state: _State, active: IntArray
+) -> None:
+    """Finish the few stiff gauges (a handful of peaks against centuries below a level) by Newton's method."""
+    for _ in range(_NEWTON_ITERATIONS):
+        part, x = sample.keep_gauges(active), state.theta[:, active]
+        f, own_skew = _residual(part, rule, active, x)
+        slope = np.empty((len(active), 3, 3))
+        for i in range(3):
+            shift = np.where(np.arange(3)[:, None] == i, 1e-6, 0.0)
+            ahead, behind = (_residual(part, rule, active, x + sign * shift)[0] for sign in (1, -1))
+            slope[:, :, i] = ((ahead - behind) / 2e-6).T
+        regular = np.abs(np.linalg.det(slope)) > 1e-12
+        slope[~regular] = -np.eye(3)
+        step = -np.linalg.solve(slope, f.T[:, :, None])[:, :, 0].T
+        small = (np.abs(f).max(axis=0) < tolerance) & (np.abs(step).max(axis=0) < tolerance)
+        state.station[active], state.converged[active] = own_skew, small
+        state.iterations[active] += 7
+        best, best_x = np.full(len(active), np.inf), x
+        for fraction in (1.0, 0.5, 0.2, 0.05):
+            trial = _bound_step(x, fraction * step)
+            size = np.abs(_residual(part, rule, active, trial)[0]).max(axis=0)
+            best_x, best = np.where(size < best, trial, best_x), np.minimum(size, best)
+        state.iterations[active] += 4
+        state.theta[:, active] = np.where(small, x, best_x)
+        active = active[~small]
+        if not len(active):
+            return
+
+
+def _residual(
+    part: CensoredSample, rule: SkewRule, active: IntArray, x: FloatArray
+) -> tuple[FloatArray, FloatArray]:
+    """How far the update moves from x, and the station skew it finds."""
+    f, own_skew = _update(part, x)
+    f[2] = rule(own_skew, active)
+    return f - x, own_skew
 
 
 def _update(sample: CensoredSample, theta: FloatArray) -> tuple[FloatArray, FloatArray]:
