@@ -34,8 +34,8 @@ CHECKS = (
 
 
 def main() -> int:
-    arguments = read_arguments()
     refuse_old_python()
+    arguments = read_arguments()
     started = time.monotonic()
     set_up()
     if arguments.command == "run":

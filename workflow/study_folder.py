@@ -20,7 +20,10 @@ def find_study(workflow: Any, default: Path) -> Path:
         stop(
             "Settings on the command line (--config) would not be on record: write them into the study file."
         )
-    return Path(named[0] if named else default).resolve()
+    study = Path(named[0] if named else default).resolve()
+    if workflow.overwrite_workdir and Path(workflow.overwrite_workdir).resolve() != study.parent:
+        stop(f"Leave out --directory: a study's files lie in its own folder, {study.parent}")
+    return study
 
 
 def read_study(study: Path) -> Any:
