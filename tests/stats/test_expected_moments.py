@@ -102,11 +102,10 @@ def test_fixed_point_equals_quadrature_and_a_root_finder():
     def expectation(power, centre, mu, s, g):
         bottom = max(float(support(g)[0]), -12)
         top = (1.9 - mu) / s
-        parts = [
-            quad(lambda w: f(w) * pdf(w, g), bottom, top, epsabs=1e-12, limit=200)[0]
-            for f in (lambda w: (mu + s * w - centre) ** power, lambda w: 1.0)
-        ]
-        return parts[0] / parts[1]
+        above = quad(
+            lambda w: (mu + s * w - centre) ** power * pdf(w, g), bottom, top, epsabs=1e-12, limit=200
+        )[0]
+        return above / quad(lambda w: pdf(w, g), bottom, top, epsabs=1e-12, limit=200)[0]
 
     def residual(theta):
         mu, s, g = theta
