@@ -69,6 +69,12 @@ def test_manifest_that_cannot_be_read_names_nothing(tmp_path, content):
     assert [] == written_files(tmp_path / "none.json")
 
 
-def test_sources_have_one_digest():
-    assert digest_sources() == digest_sources()
-    assert 64 == len(digest_sources())
+def test_digest_of_the_sources_changes_with_a_source_and_not_with_what_is_compiled(tmp_path):
+    digests = []
+    for name, source, compiled in (("a", "x = 1", "1"), ("b", "x = 1", "2"), ("c", "x = 2", "1")):
+        (tmp_path / name / "room").mkdir(parents=True)
+        (tmp_path / name / "room" / "module.py").write_text(source, encoding="utf-8")
+        (tmp_path / name / "room" / "module.pyc").write_text(compiled, encoding="utf-8")
+        digests.append(digest_sources(tmp_path / name))
+    assert digests[0] == digests[1]
+    assert digests[0] != digests[2]

@@ -62,7 +62,7 @@ def list_ledger(tables: Mapping[str, Table]) -> PageTable | None:
     kept = [name for name in frame.columns if any(_text(value) for value in frame[name])]
     return PageTable(
         caption="Decisions of the analysts, with their effect",
-        head=tuple(plain(name).capitalize() for name in kept),
+        head=tuple(plain(name) for name in kept),
         rows=tuple(tuple(_text(value) for value in row) for row in frame[kept].itertuples(index=False)),
         source="tables/ledger.csv",
     )
@@ -118,7 +118,7 @@ def _pools(tables: Mapping[str, Table]) -> PageTable | None:
     )
     return PageTable(
         "Pools of gauges, their homogeneity (H1) and the distribution chosen",
-        ("Pool", "Gauges", "Station-years", "H1", "Verdict", "Distribution"),
+        ("pool", "gauges", "station-years", "H1", "verdict", "distribution"),
         rows[:SHOWN_ROWS],
         "tables/pool_tests.csv",
     )
@@ -152,12 +152,12 @@ def _adopted(config: StudyConfig, tables: Mapping[str, Table], targets: pd.DataF
     if not any(row[-1] for row in rows):
         rows = [row[:-1] for row in rows]
     unit = format_unit(config.units.flow)
-    head = ("Site", "Name", *(f"{format_aep(aep)} AEP, {unit}" for aep in aeps))
+    head = ("site", "name", *(f"{format_aep(aep)} AEP, {unit}" for aep in aeps))
     head += (f"{format_percent(config.confidence)} interval at {format_aep(aeps[-1])} AEP, {unit}",)
     caption = "Adopted floods at the ungauged sites"
     if len(sites) > SHOWN_ROWS:
         caption += f" (the first {SHOWN_ROWS} of {len(sites)})"
-    head += ("Remark",) if len(rows[0]) > len(head) else ()
+    head += ("remark",) if len(rows[0]) > len(head) else ()
     return PageTable(caption, head, tuple(rows), "tables/target_estimates.csv")
 
 

@@ -7,6 +7,7 @@ import json
 import platform
 from collections.abc import Mapping
 from dataclasses import dataclass
+from functools import cache
 from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path, PurePosixPath
 from typing import Any
@@ -111,9 +112,9 @@ def software_versions() -> dict[str, str]:
     return found
 
 
-def digest_sources() -> str:
-    """Digest the program's own source files: tells two states of one version apart."""
-    root = Path(__file__).parents[1]
+@cache
+def digest_sources(root: Path = Path(__file__).parents[1]) -> str:
+    """Digest the program's own source files, once a process: tells two states of one version apart."""
     digest = hashlib.sha256()
     for path in sorted(root.rglob("*"), key=lambda p: p.relative_to(root).as_posix()):
         if path.is_file() and path.suffix in {".py", ".j2", ".css", ".js", ".yaml"}:
