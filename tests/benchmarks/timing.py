@@ -5,14 +5,13 @@ thread (OPENBLAS_NUM_THREADS=1, set here too as long as this module is imported 
 """
 
 import os
-
-for _variable in ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS"):
-    os.environ.setdefault(_variable, "1")
-
 import time
 from collections.abc import Callable
 from dataclasses import dataclass
 from statistics import median
+
+for _variable in ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS"):
+    os.environ.setdefault(_variable, "1")
 
 
 @dataclass(frozen=True)

@@ -70,7 +70,7 @@ def density(parameters: ArrayLike, x: ArrayLike) -> FloatArray:
     """Return the probability density at `x`, zero outside the bounds."""
     location, scale, k = split(parameters)
     y = unbend((np.asarray(x, dtype=float) - location) / scale, k)
-    inside = np.isfinite(y)
+    inside = ~np.isinf(y)
     y = np.where(inside, y, 0.0)
     with np.errstate(over="ignore"):
         return np.where(inside, np.exp(k * y - y - np.exp(-y)) / scale, 0.0)

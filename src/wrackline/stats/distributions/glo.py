@@ -41,9 +41,10 @@ def density(parameters: ArrayLike, x: ArrayLike) -> FloatArray:
     """Return the probability density at `x`, zero outside the bounds."""
     location, scale, k = split(parameters)
     y = unbend((np.asarray(x, dtype=float) - location) / scale, k)
-    inside = np.isfinite(y)
+    inside = ~np.isinf(y)
     y = np.where(inside, y, 0.0)
-    return np.where(inside, np.exp(k * y - y - 2 * np.logaddexp(0.0, -y)) / scale, 0.0)
+    with np.errstate(invalid="ignore"):
+        return np.where(inside, np.exp(k * y - y - 2 * np.logaddexp(0.0, -y)) / scale, 0.0)
 
 
 def fourth_ratio(t3: ArrayLike) -> FloatArray:

@@ -41,7 +41,7 @@ def density(parameters: ArrayLike, x: ArrayLike) -> FloatArray:
     """Return the probability density at `x`, zero outside the bounds."""
     _, scale, k = split(parameters)
     y = _reduced(parameters, x)
-    inside = np.isfinite(y) & (y >= 0)
+    inside = ~(np.isinf(y) | (y < 0))
     y = np.where(inside, y, 0.0)
     return np.where(inside, np.exp(k * y - y) / scale, 0.0)
 

@@ -69,7 +69,7 @@ def quantile_from_log_p(parameters: ArrayLike, log_p: ArrayLike) -> FloatArray:
     """
     location, scale, k, h = split(parameters)
     log_p = np.asarray(log_p, dtype=float)
-    if location.ndim == 0 and min(abs(float(k)), abs(float(h))) > 1e-100:
+    if location.ndim == 0 and log_p.ndim > 0 and min(abs(float(k)), abs(float(h))) > 1e-100:
         return _quantile_in_place(float(location), float(scale), float(k), float(h), log_p)
     with np.errstate(divide="ignore"):
         reduced = -np.log(bend(-log_p, h))
@@ -88,13 +88,13 @@ def density(parameters: ArrayLike, x: ArrayLike) -> FloatArray:
     """Return the probability density at `x`, zero outside the bounds."""
     location, scale, k, h = split(parameters)
     reduced = unbend((np.asarray(x, dtype=float) - location) / scale, k)
-    inside = np.isfinite(reduced)
+    inside = ~np.isinf(reduced)
     reduced = np.where(inside, reduced, 0.0)
     with np.errstate(over="ignore", invalid="ignore"):
         minus_log_f = unbend(np.exp(-reduced), h)
-        inside &= np.isfinite(minus_log_f)
+        inside &= ~np.isinf(minus_log_f)
         value = np.exp(-(1 - h) * minus_log_f - (1 - k) * reduced) / scale
-    return np.where(np.isnan(scale), np.nan, np.where(inside, value, 0.0))
+    return np.where(inside, value, 0.0)
 
 
 def ratios(k: ArrayLike, h: ArrayLike) -> tuple[FloatArray, FloatArray]:

@@ -104,6 +104,7 @@ def _reduced(parameters: ArrayLike, x: ArrayLike) -> FloatArray:
             y = following
             if np.all(settled):
                 break
+    y = np.where(x <= location, 0.0, y)
     return np.where(np.isnan(location) | np.isnan(x), np.nan, y)
 
 
