@@ -119,7 +119,8 @@ def fit_gev_partial(moments: ArrayLike, censored_share: ArrayLike) -> FloatArray
     def miss(k: FloatArray) -> FloatArray:
         # Location and scale are linear: what is left is one determinant in the shape.
         c, g = _gev_integrals(k[..., None], share[..., None], 3)
-        return np.linalg.det(np.stack(np.broadcast_arrays(b, c, g), axis=-1))
+        with np.errstate(invalid="ignore"):
+            return np.asarray(np.linalg.det(np.stack(np.broadcast_arrays(b, c, g), axis=-1)))
 
     low, high = np.full(share.shape, -0.99), np.full(share.shape, 5.0)
     at_low, at_high = miss(low), miss(high)
