@@ -20,7 +20,7 @@ def draw_record_years(records: PeakRecords, path: Path) -> None:
         axes.bar(span, known, width=0.9, color=WATER, label="known exactly")
         if bounded.any():
             axes.bar(span, bounded, width=0.9, bottom=known, color=SAND, label="known as an interval")
-            axes.legend(loc="upper left")
+            axes.legend(loc="upper left", frameon=False)
     axes.set_xlabel("water year")
     axes.set_ylabel("gauges with a peak")
     axes.grid(axis="x", visible=False)

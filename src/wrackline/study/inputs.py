@@ -286,11 +286,10 @@ class _Reading:
         with_rows[peaks.every_key // YEAR_STEP] = True
         silent = [name for name, has in zip(records.gauge_ids, with_rows, strict=True) if not has]
         if silent:
-            shown = ", ".join(silent[:10]) + (f" and {len(silent) - 10} more" if len(silent) > 10 else "")
             log.warning(
                 "gauges_without_peaks",
                 self.config.inputs.gauges,
-                f"{len(silent)} gauges have no row in {peaks.file}: {shown}.",
+                f"{len(silent)} gauges have no row in {peaks.file}: {_few(silent)}.",
                 "Add their peaks, or list them among the targets.",
             )
         fewest = self.config.screening.minimum_peaks if "short_record" in self.config.screening.exclude else 3
@@ -336,9 +335,15 @@ def _place_centroids(
         log.warning(
             "centroid_from_site",
             file,
-            f"{own.sum()} of {len(sites)} sites have neither a basin polygon nor a centroid: their own position is used.",
+            f"{own.sum()} of {len(sites)} sites have neither a basin polygon nor a centroid, and their own position "
+            f"is used: {_few(sites.loc[own, id_column].tolist())}.",
             "Distances between basins are then distances between outlets; give `basins` or the centroid columns.",
         )
+
+
+def _few(names: list[str]) -> str:
+    """Name up to ten sites and count the rest."""
+    return ", ".join(names[:10]) + (f" and {len(names) - 10} more" if len(names) > 10 else "")
 
 
 def _no_targets(config: StudyConfig) -> pd.DataFrame:

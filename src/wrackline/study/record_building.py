@@ -157,7 +157,12 @@ def _by_flags(verdicts: _Verdicts, peaks: Peaks, uses: Flags) -> None:
         )
     flag = each_word(peaks.flags, lambda cell: first(cell, "exclude"))
     chosen = flag != ""
-    verdicts.say(chosen, "flag " + flag[chosen], "flag " + flag[chosen], excluded=True)
+    verdicts.say(
+        chosen,
+        "flag " + flag[chosen],
+        "flag " + flag[chosen] + ": the configuration leaves such peaks out",
+        excluded=True,
+    )
 
 
 def _by_periods(

@@ -65,6 +65,23 @@ G, P, T, L = "gauges.csv", "peaks.csv", "targets.csv", "ledger.csv"
 
 STUDY_FILE_CASES = [
     Broken(
+        "folder in place of a file",
+        both(key("periods: periods.csv", "periods: ."), raw("periods.csv", None)),
+        (("unreadable_file", ".", None, None, None),),
+    ),
+    Broken(
+        "column without a name",
+        lambda study: [line.append("" if row == 0 else "7") for row, line in enumerate(study.tables[P])],
+        (("nameless_column", P, 1, None, None),),
+    ),
+    Broken(
+        "misspelt optional column",
+        put(P, 1, "cause", "causes"),
+        (),
+        (("unused_column", P, 1, "causes", None),),
+        says="Is it 'cause'?",
+    ),
+    Broken(
         "unknown key",
         key("water_year_starts", "water_year_start"),
         (("unknown_key", "study.yaml", 10, "water_year_start", "10"),),
@@ -99,6 +116,28 @@ STUDY_FILE_CASES = [
         (("out_of_range", "study.yaml", 10, "water_year_starts", "13"),),
     ),
     Broken(
+        "word not known to the configuration",
+        key("index_flood:", "pooling:\n  regions: polygon\nindex_flood:"),
+        (("unknown_word", "study.yaml", 15, "pooling.regions", "polygon"),),
+        says="Did you mean 'polygons'?",
+    ),
+    Broken(
+        "key required and missing",
+        key("index_flood:", "pooling:\n  moves: [{gauge_id: '00101', to: north}]\nindex_flood:"),
+        (("missing_key", "study.yaml", 15, "pooling.moves.0.why", None),),
+    ),
+    Broken(
+        "attribute named as a column of every study",
+        both(key("  rain_mm:", "  region:"), key("[area, rain_mm]", "[area]")),
+        (("bad_value", "study.yaml", None, None, None),),
+        says="region",
+    ),
+    Broken(
+        "list in place of keys",
+        lambda study: setattr(study, "study", "- 1\n"),
+        (("not_a_mapping", "study.yaml", None, None, None),),
+    ),
+    Broken(
         "doubled key",
         key("water_year_starts: 10", "water_year_starts: 10\nwater_year_starts: 7"),
         (("doubled_key", "study.yaml", 11, "water_year_starts", None),),
@@ -131,6 +170,23 @@ STUDY_FILE_CASES = [
 ]
 
 FILE_CASES = [
+    Broken(
+        "folder in place of a file",
+        both(key("periods: periods.csv", "periods: ."), raw("periods.csv", None)),
+        (("unreadable_file", ".", None, None, None),),
+    ),
+    Broken(
+        "column without a name",
+        lambda study: [line.append("" if row == 0 else "7") for row, line in enumerate(study.tables[P])],
+        (("nameless_column", P, 1, None, None),),
+    ),
+    Broken(
+        "misspelt optional column",
+        put(P, 1, "cause", "causes"),
+        (),
+        (("unused_column", P, 1, "causes", None),),
+        says="Is it 'cause'?",
+    ),
     Broken("missing file", raw("periods.csv", None), (("missing_file", "periods.csv", None, None, None),)),
     Broken(
         "missing file with a near name",
@@ -501,6 +557,11 @@ SITE_CASES = [
         "pair with an unknown gauge",
         put("redundancy.csv", 2, "other_id", "00199"),
         (("unknown_gauge", "redundancy.csv", 2, "other_id", "00199"),),
+    ),
+    Broken(
+        "pair of a gauge with itself",
+        both(put("redundancy.csv", 2, "other_id", "00105")),
+        (("pair_with_itself", "redundancy.csv", 2, "other_id", "00105"),),
     ),
     Broken(
         "pair that keeps a third gauge",
