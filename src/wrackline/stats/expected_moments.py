@@ -197,7 +197,7 @@ def _finish_by_newton(
             slope[:, :, i] = ((ahead - behind) / 2e-6).T
         regular = np.abs(np.linalg.det(slope)) > 1e-12
         slope[~regular] = -np.eye(3)
-        step: FloatArray = -np.linalg.solve(slope, f.T[:, :, None])[:, :, 0].T
+        step = -np.linalg.solve(slope, f.T[:, :, None])[:, :, 0].T.astype(float)
         small = (np.abs(f).max(axis=0) < tolerance) & (np.abs(step).max(axis=0) < tolerance)
         state.station[active], state.converged[active] = own_skew, small
         state.iterations[active] += 7
