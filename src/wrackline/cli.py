@@ -1,4 +1,4 @@
-"""The command line: ``wrackline check``, ``wrackline new``."""
+"""The command line: ``wrackline check``, ``wrackline new``, ``wrackline fit``."""
 
 from __future__ import annotations
 
@@ -12,6 +12,7 @@ import typer
 from rich.console import Console
 from rich.text import Text
 
+from wrackline.fit_command import fit
 from wrackline.study.faults import Fault, StudyFaults
 from wrackline.study.loading import UnreadableStudy
 
@@ -69,6 +70,9 @@ def new(folder: Annotated[Path, typer.Argument(metavar="FOLDER", help="The folde
     for path in start_study(folder):
         print(path)
     print(f"Fill in the tables (columns.md explains them), then: wrackline check {folder / 'study.yaml'}")
+
+
+app.command()(fit)
 
 
 def print_faults(
