@@ -7,7 +7,9 @@ import pytest
 
 from wrackline.report import maps, page
 from wrackline.report.page import (
+    LONG_TABLE,
     SHOWN_PEAKS,
+    SHOWN_ROWS,
     SHOWN_WARNINGS,
     GaugePeaks,
     StudyPage,
@@ -86,6 +88,20 @@ def test_a_national_list_of_peaks_is_left_to_its_table():
     text = render_page(make_page(peaks=(few, many)))
     assert "<b>1990</b>" not in text
     assert "too many to list here" in text
+
+
+def test_long_tables_are_folded_up_and_very_long_ones_left_to_their_file():
+    def text_of(n_rows: int) -> str:
+        table = PageTable(
+            "Gauges.", ("gauge",), tuple((f"g-{i}",) for i in range(n_rows)), "tables/pools.csv"
+        )
+        return render_page(make_page(sections=(Section("data", "Data", tables=(table,)),)))
+
+    assert "<details" not in text_of(LONG_TABLE)
+    assert f"Gauges <span>{LONG_TABLE + 1} rows</span>" in text_of(LONG_TABLE + 1)
+    assert f">g-{SHOWN_ROWS - 1}<" in text_of(SHOWN_ROWS + 1)
+    assert f">g-{SHOWN_ROWS}<" not in text_of(SHOWN_ROWS + 1)
+    assert "the rest stand in <code>tables/pools.csv</code>" in text_of(SHOWN_ROWS + 1)
 
 
 def test_declared_units_and_water_year_stand_in_the_head():

@@ -35,7 +35,7 @@ def count_study(tables: Mapping[str, Table], n_gauges: int, n_targets: int) -> t
         counts.append(Count("Peaks used", int(fates.get("used", 0)) + intervals, int(fates.sum()), remark))
     tests = tables.get("pool_tests")
     if tests is not None:
-        verdicts = tests.frame["verdict"].map(plain).value_counts()
+        verdicts = tests.frame["verdict"].map(_short_verdict).value_counts()
         words = ", ".join(f"{count} {verdict}" for verdict, count in sorted(verdicts.items()))
         counts.append(Count("Pools", len(tests.frame), None, words))
     if "target_estimates" in tables and n_targets:
@@ -87,6 +87,10 @@ def list_peaks(records: PeakRecords, gauges: pd.DataFrame, flow_in_m3s: float) -
 def _peak(low: float, high: float, historic: bool) -> str:
     text = format_flow(low) if low == high else format_interval(low, high)
     return f"{text} h" if historic else text
+
+
+def _short_verdict(verdict: str) -> str:
+    return plain(verdict.partition(";")[0])
 
 
 def _count_estimated(tables: Mapping[str, Table]) -> int:

@@ -35,6 +35,9 @@ MONTHS = (
     "January", "February", "March", "April", "May", "June",
     "July", "August", "September", "October", "November", "December",
 )  # fmt: skip
+LONG_TABLE = 25
+"""Rows above which a table is folded up on the screen (print shows it)."""
+SHOWN_ROWS = 500
 SHOWN_WARNINGS = 150
 SHOWN_PEAKS = 20_000
 _NUMBER = re.compile(r"[<>≤≥±~]?\s*[-\u2212+]?[\d\s,.\u202f]*\d(?:e[-+]?\d+)?\s*%?")
@@ -258,7 +261,12 @@ def _template() -> Any:
     )
     environment.filters |= {"number_columns": number_columns, "count": format_count, "unit": format_unit}
     environment.filters["percent"] = format_percent
-    environment.globals |= {"cite": cite, "thin": THIN_SPACE}
+    environment.globals |= {
+        "cite": cite,
+        "thin": THIN_SPACE,
+        "long_table": LONG_TABLE,
+        "shown_rows": SHOWN_ROWS,
+    }
     return environment.from_string(
         files("wrackline.report").joinpath("page.html.j2").read_text(encoding="utf-8")
     )
