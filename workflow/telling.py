@@ -22,23 +22,29 @@ CHATTER = (
 )
 
 
-def hush(dry_run: bool) -> None:
-    """Leave out the engine's own running commentary, and its traceback of a stage that has told its error itself."""
+def hush(dry_run: bool, results: Path) -> None:
+    """Leave out the engine's own running commentary, and its traceback of a stage that has told its error itself.
+
+    When there is nothing to do, say so together with where the results lie.
+    """
+
+    def worth_telling(record: logging.LogRecord) -> bool:
+        message = record.getMessage()
+        if message.startswith("Nothing to be done"):
+            tell_results(results, "Nothing to do, the study is up to date.")
+            return False
+        if record.levelno > logging.WARNING and "CalledProcessError" in message and ".stages." in message:
+            return False
+        return not message.startswith(CHATTER)
+
     if not dry_run:
-        logging.getLogger("snakemake.logging").addFilter(_worth_telling)
+        logging.getLogger("snakemake.logging").addFilter(worth_telling)
 
 
-def _worth_telling(record: logging.LogRecord) -> bool:
-    message = record.getMessage()
-    if record.levelno > logging.WARNING and "CalledProcessError" in message and ".stages." in message:
-        return False
-    return not message.startswith(CHATTER)
-
-
-def tell_results(results: Path) -> None:
+def tell_results(results: Path, beginning: str = "The study is done.") -> None:
     """Say where the page, the tables and the maps lie."""
     print(
-        f"\nThe study is done.\n  page    {results / 'report.html'}\n  tables  {results / 'tables'}"
+        f"\n{beginning}\n  page    {results / 'report.html'}\n  tables  {results / 'tables'}"
         f"\n  maps    {results / 'maps'}\n  record  {results / 'manifest.json'}",
         file=sys.stderr,
     )

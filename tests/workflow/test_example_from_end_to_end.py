@@ -83,7 +83,8 @@ def test_second_run_does_nothing(finished: tuple[Path, str], run_workflow: Run) 
     run = run_workflow(study)
     assert 0 == run.returncode
     assert [] == stages_run(run.stdout)
-    assert "Nothing to be done" in run.stdout
+    assert "Nothing to do, the study is up to date." in run.stdout
+    assert str(study.parent / "results" / "report.html") in run.stdout
     assert before == {path: path.stat().st_mtime_ns for path in study.parent.rglob("results/**/*")}
 
 
@@ -93,13 +94,16 @@ def test_input_saved_again_unchanged_starts_nothing(finished: tuple[Path, str], 
     assert [] == stages_run(run_workflow(finished[0]).stdout)
 
 
-def test_deleted_intermediates_are_made_again_to_the_same_bytes(
+def test_deleted_intermediates_are_missed_only_when_needed_and_then_made_again(
     finished: tuple[Path, str], run_workflow: Run
 ) -> None:
     study, _ = finished
     before = tables(study)
     figure = next((study.parent / "work" / "estimate" / "figures").iterdir())
     figure.unlink()
+    assert [] == stages_run(run_workflow(study).stdout), "the results are whole"
+
+    (study.parent / "results" / "report.html").unlink()
     run = run_workflow(study)
     assert 0 == run.returncode, run.stdout
     assert ["estimate", "publish"] == stages_run(run.stdout)
