@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -15,6 +16,9 @@ from wrackline.stats.moment_covariance import ThresholdClasses
 from wrackline.stats.pearson3 import EXPANSION_SKEW, frequency_factor
 
 FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+
+_TOLERANCE = 1e-5
 
 
 @dataclass(frozen=True)
@@ -84,7 +88,7 @@ def bootstrap_fit(
             drawn = skew + np.sqrt(mse) * stream.standard_normal(replicates)
             ratio = np.full(replicates, fits.censoring_ratio[gauge])
             rule = weighting(drawn, np.full(replicates, mse), sample.years, ratio)
-    refits = fit_expected_moments(sample, rule, tolerance=1e-6)
+    refits = fit_expected_moments(sample, rule, tolerance=_TOLERANCE, parent=(mean, sd, skew))
     quantile = refits.mean[:, None] + refits.sd[:, None] * frequency_factor(
         aeps[None, :], refits.skew[:, None]
     )
@@ -109,43 +113,55 @@ def draw_samples(
     The replicates are the gauges of the result.
     """
     years = classes.years
-    x = mean + sd * _draw_standardised(skew, (replicates, int(years.sum())), stream)
-    low, high = np.repeat(classes.low, years), np.repeat(classes.high, years)
+    # Deviations from the parent's mean, worked on in place: the passes over this array are most of the cost.
+    d = _draw_standardised(skew, (replicates, int(years.sum())), stream)
+    d *= sd
+    low, high = np.repeat(classes.low, years) - mean, np.repeat(classes.high, years) - mean
     starts = np.concatenate([[0], np.cumsum(years)[:-1]])
-    below, above = x < low, x > high
-    exact = ~(below | above)
-    count = exact.sum(axis=1)
-    known = np.where(exact, x, 0.0)
-    centre = known.sum(axis=1) / np.maximum(count, 1)
-    deviation = np.where(exact, x - centre[:, None], 0.0)
-    square = deviation * deviation
-    pieces = []
-    for outside, ends in (
-        (below, (np.full(len(years), -np.inf), classes.low)),
-        (above, (classes.high, np.full(len(years), np.inf))),
-    ):
-        if outside.any():
-            counts = np.add.reduceat(outside, starts, axis=1, dtype=np.int64)
-            row, column = np.nonzero(counts)
-            pieces.append((row, ends[0][column], ends[1][column], counts[row, column]))
-    row = np.concatenate([piece[0] for piece in pieces]) if pieces else np.zeros(0, dtype=np.int64)
-    order = np.argsort(row, kind="stable")
-
-    def column_of(i: int) -> NDArray[np.float64]:
-        return np.concatenate([piece[i] for piece in pieces])[order] if pieces else np.zeros(0)
-
+    open_end = np.full(len(years), np.inf)
+    count = np.full(replicates, d.shape[1], dtype=np.int64)
+    pieces: list[tuple[IntArray, FloatArray, FloatArray, IntArray]] = []
+    outside_any = np.zeros(d.shape, dtype=bool)
+    for outside, bottom, top in ((d < low, -open_end, classes.low), (d > high, classes.high, open_end)):
+        if not outside.any():
+            continue
+        counts = np.add.reduceat(outside, starts, axis=1, dtype=np.int64)
+        row, column = np.nonzero(counts)
+        pieces.append((row, bottom[column], top[column], counts[row, column]))
+        count -= counts.sum(axis=1)
+        outside_any |= outside
+    if pieces:
+        smallest = np.where(outside_any, np.inf, d).min(axis=1)
+        largest = np.where(outside_any, -np.inf, d).max(axis=1)
+        d *= ~outside_any
+    else:
+        smallest, largest = d.min(axis=1), d.max(axis=1)
+    square = d * d
+    share = np.maximum(count, 1)
+    first, second, third = d.sum(axis=1) / share, square.sum(axis=1), np.einsum("ij,ij->i", square, d)
     return CensoredSample(
         exact_count=count,
-        exact_mean=centre,
-        exact_squares=square.sum(axis=1),
-        exact_cubes=np.einsum("ij,ij->i", square, deviation),
-        exact_smallest=np.where(exact, x, np.inf).min(axis=1),
-        exact_largest=np.where(exact, x, -np.inf).max(axis=1),
-        class_gauge=row[order],
-        class_low=column_of(1),
-        class_high=column_of(2),
-        class_years=column_of(3).astype(np.int64),
+        exact_mean=mean + first,
+        exact_squares=second - count * first**2,
+        exact_cubes=third - 3 * first * second + 2 * count * first**3,
+        exact_smallest=mean + smallest,
+        exact_largest=mean + largest,
+        **_join_classes(pieces),
     )
+
+
+def _join_classes(pieces: list[tuple[IntArray, FloatArray, FloatArray, IntArray]]) -> dict[str, Any]:
+    """Classes of censored years below and above, in the order of the replicates."""
+    row, bottom, top, years = (
+        (np.concatenate(column) for column in zip(*pieces, strict=True)) if pieces else (np.zeros(0),) * 4
+    )
+    order = np.argsort(row, kind="stable")
+    return {
+        "class_gauge": row[order].astype(np.int64),
+        "class_low": bottom[order],
+        "class_high": top[order],
+        "class_years": years[order].astype(np.int64),
+    }
 
 
 def _draw_standardised(skew: float, size: tuple[int, int], stream: np.random.Generator) -> FloatArray:
@@ -154,4 +170,7 @@ def _draw_standardised(skew: float, size: tuple[int, int], stream: np.random.Gen
         z = stream.standard_normal(size)
         return z + skew / 6 * (z * z - 1)
     c = 0.5 * skew
-    return c * (stream.standard_gamma(c**-2, size=size) - c**-2)
+    w = stream.standard_gamma(c**-2, size=size)
+    w -= c**-2
+    w *= c
+    return w

@@ -54,7 +54,7 @@ def frequency_factor(aep: ArrayLike, skew: ArrayLike) -> FloatArray:
     for rows, inverse in ((skew >= EXPANSION_SKEW, gammainccinv), (skew <= -EXPANSION_SKEW, gammaincinv)):
         if rows.any():
             c = 0.5 * skew[rows]
-            alpha = c**-2
+            alpha = 1 / (c * c)
             k[rows] = c * (inverse(alpha, aep[rows]) - alpha)
     return k
 
@@ -90,18 +90,10 @@ def pdf(w: ArrayLike, skew: ArrayLike) -> FloatArray:
     At the bound itself, where the density may be infinite (absolute skew above 2), 0 is returned.
     """
     w, skew = np.broadcast_arrays(np.asarray(w, dtype=float), np.asarray(skew, dtype=float))
-    c = 0.5 * skew
-    u = c * w
+    u = 0.5 * skew * w
     inside = np.isfinite(w) & (u > -1)
-    safe_u = np.where(inside, u, 0.0)
-    safe_c2 = np.where(np.abs(c) < 1e-12, 1.0, c * c)
-    # alpha * (log1p(u) - u) tends to -w**2 / 2; a series avoids the cancellation at small u.
-    small = np.abs(safe_u) < 1e-2
-    series = safe_w2 = np.where(inside, w, 0.0) ** 2
-    series = -safe_w2 * _log1p_remainder(np.where(small, safe_u, 0.0))
-    exponent = np.where(small, series, (np.log1p(safe_u) - safe_u) / safe_c2)
-    log_f = exponent - np.log1p(safe_u) - _HALF_LOG_2PI - _stirling_remainder(c * c)
-    return np.where(inside, np.exp(log_f), np.where(np.isnan(w) | np.isnan(skew), np.nan, 0.0))
+    density = _boundary_term(np.where(inside, w, 0.0), skew) / (1 + np.where(inside, u, 0.0))
+    return np.where(inside, density, np.where(np.isnan(w) | np.isnan(skew), np.nan, 0.0))
 
 
 def support(skew: ArrayLike) -> tuple[FloatArray, FloatArray]:
@@ -195,13 +187,28 @@ def _interval_terms(
     upper = has_low & (~has_high | (w_low + w_high > 0))
     tail_low, tail_high = np.where(upper, 1.0, 0.0), np.where(upper, 0.0, 1.0)
     at_low, at_high = np.zeros(low.shape), np.zeros(low.shape)
-    c = 0.5 * skew
     for has, w, tail, term in ((has_low, w_low, tail_low, at_low), (has_high, w_high, tail_high, at_high)):
         if has.any():
             w_has, skew_has = w[has], skew[has]
             tail[has] = _tail(w_has, skew_has, upper[has])
-            term[has] = (1 + c[has] * w_has) * pdf(w_has, skew_has)
+            term[has] = _boundary_term(w_has, skew_has)
     return np.where(upper, tail_low - tail_high, tail_high - tail_low), at_low, at_high, w_low, w_high
+
+
+def _boundary_term(w: FloatArray, skew: FloatArray) -> FloatArray:
+    """``(1 + c w)`` times the density at finite w; 0 outside the support."""
+    c = 0.5 * skew
+    u = c * w
+    inside = u > -1
+    safe_u = np.where(inside, u, 0.0)
+    c2 = c * c
+    # alpha * (log1p(u) - u) tends to -w**2 / 2; a series avoids the cancellation at small u.
+    small = np.abs(safe_u) < 1e-2
+    exponent = np.array((np.log1p(safe_u) - safe_u) / np.where(small, 1.0, c2))
+    if small.any():
+        exponent[small] = -w[small] * w[small] * _log1p_remainder(safe_u[small])
+    term = np.exp(exponent - _stirling_remainder(c2) - _HALF_LOG_2PI)
+    return term if inside.all() else np.where(inside, term, 0.0)
 
 
 def _probability(w: ArrayLike, skew: ArrayLike, *, upper: bool) -> FloatArray:
@@ -216,7 +223,7 @@ def _tail(w: FloatArray, skew: FloatArray, upper: NDArray[np.bool_]) -> FloatArr
     if near_zero.any():
         probability[near_zero] = _edgeworth(w[near_zero], skew[near_zero], upper[near_zero])
     c = np.where(near_zero, 1.0, 0.5 * skew)
-    alpha = c**-2
+    alpha = 1 / (c * c)
     y = alpha * np.maximum(1 + c * w, 0.0)
     from_above = upper != (skew < 0)
     for rows, function in ((~near_zero & ~from_above, gammainc), (~near_zero & from_above, gammaincc)):
