@@ -162,7 +162,8 @@ def _ledger_decisions(
 ) -> tuple[dict[int, str], dict[int, str]]:
     """Gauges that the ledger keeps and excludes, with its reasons; the latest line on a gauge counts."""
     number = {gauge_id: i for i, gauge_id in enumerate(gauge_ids)}
-    lines = ledger[(ledger["subject"] == "gauge") & ledger["gauge_id"].isin(gauge_ids)]
+    about = (ledger["subject"] == "gauge") & ledger["action"].isin(["keep", "exclude"])
+    lines = ledger[about & ledger["gauge_id"].isin(gauge_ids)]
     lines = lines[~lines["effect"].astype(str).str.startswith("superseded")].sort_values(
         "date", kind="stable"
     )

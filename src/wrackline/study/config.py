@@ -157,6 +157,26 @@ class Dependence(_Part):
     )
 
 
+class AtSite(_Part):
+    """Fits of log-Pearson III to every gauge's own record."""
+
+    plotting_position: Literal["weibull", "cunnane", "gringorten", "hazen"] = Field(
+        "weibull", description="Constant of the plotting positions; they are shown, nothing is fitted to them."
+    )
+    skew_bound: float | None = Field(
+        None, gt=0, le=3, description="Hold station skews within plus and minus this; blank: no bound (1.41 is in use elsewhere)."
+    )
+    alternatives: bool = Field(
+        True, description="Fit and judge other distributions beside log-Pearson III; they inform, nothing depends on them."
+    )
+    page_figures: tuple[str, ...] = Field(
+        (), description="Gauges whose frequency curves stand on the page; none named: those with most to look at."
+    )
+    all_figures: Literal["none", "png", "svg"] = Field(
+        "none", description="Draw the frequency curve of every gauge into work/atsite/figures."
+    )
+
+
 class Move(_Part):
     """A gauge that the analyst puts into another region than the inputs say."""
 
@@ -218,6 +238,7 @@ class StudyConfig(_Part):
     flags: Flags = Field(default_factory=Flags, description=Flags.__doc__ or "")
     screening: Screening = Field(default_factory=Screening, description=Screening.__doc__ or "")
     dependence: Dependence = Field(default_factory=Dependence, description=Dependence.__doc__ or "")
+    at_site: AtSite = Field(default_factory=AtSite, description=AtSite.__doc__ or "")
     pooling: Pooling = Field(default_factory=Pooling, description=Pooling.__doc__ or "")
     index_flood: IndexFlood = Field(default_factory=IndexFlood, description=IndexFlood.__doc__ or "")
 

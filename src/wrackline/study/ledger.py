@@ -23,6 +23,8 @@ from wrackline.study.vocabulary import (
 )
 
 LEDGER_COLUMNS = LEDGER.names
+FLOW_ACTIONS = ("set_flow", "set_interval", "set", "low_flood_threshold")
+"""Actions whose value is a flow, or two."""
 
 
 @dataclass(frozen=True)
@@ -129,7 +131,7 @@ def _values(sheet: Sheet, action_good: BoolArray, log: FaultLog) -> tuple[FloatA
     low, high = np.full(len(sheet), np.nan), np.full(len(sheet), np.nan)
     good = np.ones(len(sheet), dtype=bool)
     for at, (action, value) in enumerate(zip(sheet.text("action"), sheet.text("value"), strict=True)):
-        if not action_good[at] or action not in ("set_flow", "set_interval", "set"):
+        if not action_good[at] or action not in FLOW_ACTIONS:
             continue
         bounds = flow_bounds(value) if action == "set_interval" else flow_bounds(f"{value}..{value}")
         if bounds is None or bounds[0] > bounds[1] or (action != "set_interval" and not value):
@@ -241,6 +243,8 @@ def _superseded(sheet: Sheet, order: IntArray, log: FaultLog) -> IntArray:
         if subject in ("model", "estimate"):
             continue
         about = "region" if subject == "pool" else subject
+        if sheet.text("action")[line] == "low_flood_threshold":
+            about = "low floods"
         thing = (about, sheet.text("gauge_id")[line], sheet.text("water_year")[line])
         if thing in latest:
             earlier = latest[thing]

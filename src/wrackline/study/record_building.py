@@ -315,6 +315,10 @@ def _tell_other_effects(ledger: Ledger, effects: list[str]) -> None:
         )
         if later:
             effects[line] = f"superseded by row {later}"
+        elif action == "low_flood_threshold":
+            effects[line] = (
+                f"low-flood threshold of gauge {gauge} set to {_flow_text(ledger.low[line], config)} for its own fit"
+            )
         elif subject == "gauge":
             effects[line] = (
                 f"gauge {gauge} {'excluded' if action == 'exclude' else 'kept, whatever the screening says'}"

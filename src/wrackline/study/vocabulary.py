@@ -14,7 +14,7 @@ BOOLEANS = ("true", "false")
 LEDGER_ACTIONS: dict[str, tuple[str, ...]] = {
     "peak": ("exclude", "keep", "set_flow", "set_interval"),
     "threshold": ("set",),
-    "gauge": ("exclude", "keep"),
+    "gauge": ("exclude", "keep", "low_flood_threshold"),
     "pool": ("move",),
     "region": ("move",),
     "model": (),
@@ -179,7 +179,8 @@ LEDGER = InputTable(
         _optional("pool", "The pool it is about."),
         _optional(
             "value",
-            "set_flow: the flow; set_interval: low..high; threshold set: the new low; move: the region.",
+            "set_flow: the flow; set_interval: low..high; threshold set: the new low; low_flood_threshold: floods "
+            "below this flow count as below it (0: none); move: the region.",
         ),
         _optional("evidence", "Where the evidence can be found."),
     ),
