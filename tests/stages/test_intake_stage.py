@@ -75,7 +75,9 @@ def test_the_section_on_data_accounts_for_all_rows(small_study: Any, tmp_path: P
     contribution = read_contribution(take_in(small_study, tmp_path / "a"))
     (section,) = contribution.sections
     assert "data" == section.key
-    assert any("69 are used with their flow, 1 as an interval, and 3 are left out" in p for p in section.paragraphs)
+    assert any(
+        "69 are used with their flow, 1 as an interval, and 3 are left out" in p for p in section.paragraphs
+    )
     fates = section.tables[0]
     assert 73 == sum(int(row[-1]) for row in fates.rows)
     causes = next(t.frame for t in contribution.tables if t.name == "floods_by_cause").set_index("cause")

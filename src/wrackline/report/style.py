@@ -20,7 +20,7 @@ SERIES = (WATER, WARM, MOSS, PLUM, "#b8860b", "#4b5d9b", "#9c6644", "#2a9d8f")
 """Colours for regions and pools, told apart by lightness as well as by hue; pair them with MARKERS."""
 MARKERS = ("o", "s", "^", "D", "v", "P", "X", "h")
 
-RC: dict[str, Any] = {
+RC: Any = {
     "figure.dpi": 100,
     "savefig.dpi": 144,
     "font.size": 9.5,

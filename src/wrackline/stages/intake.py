@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+import calendar
 from typing import TYPE_CHECKING
 
 import numpy as np
 import pandas as pd
 
 from wrackline.report.figures_intake import draw_record_years
+from wrackline.report.rounding import format_unit
 from wrackline.stages.running import StudyFiles, main
 from wrackline.study.contribution import Contribution, Figure, PageTable, Section, write_contribution
 from wrackline.study.handover import write_records
@@ -68,7 +70,7 @@ def _contribution(study: Study) -> Contribution:
         title="Data",
         paragraphs=(*_what_was_read(study), *_what_was_left_out(study), *_what_the_analyst_decided(study)),
         figures=(figure,) if len(study.records.water_year) else (),
-        tables=(_fates(study.accounting), *_causes_page(causes), *_ledger_page(study.ledger)),
+        tables=(_fates(study.accounting), *_causes_page(causes)),
         method=(
             "Where they disagree, the ledger wins over periods.csv, that over a row's flags, those over defaults.",
             "A year in the span of a perception threshold without a recorded peak is known to have stayed below "
@@ -99,8 +101,8 @@ def _what_was_read(study: Study) -> list[str]:
     text += f", water years {years.min()} to {years.max()}." if len(years) else "."
     sentences = [
         text
-        + f" Flows are in {config.units.flow}, areas in {config.units.area}; the water year starts in month "
-        f"{config.water_year_starts} and is named by the calendar year in which it ends."
+        + f" Flows are in {format_unit(config.units.flow)}, areas in {format_unit(config.units.area)}; the water year "
+        f"starts in {calendar.month_name[config.water_year_starts]} and is named by the calendar year in which it ends."
     ]
     historic = int((records.historic & records.observed).sum())
     censored = int((~records.observed).sum())
@@ -165,14 +167,6 @@ def _causes_page(causes: pd.DataFrame) -> list[PageTable]:
     return [
         PageTable("Peaks in use by cause.", ("cause", "peaks", "share"), rows, "tables/floods_by_cause.csv")
     ]
-
-
-def _ledger_page(ledger: pd.DataFrame) -> list[PageTable]:
-    if ledger.empty:
-        return []
-    shown = ("date", "by", "subject", "why", "effect")
-    rows = tuple(tuple(row) for row in ledger[list(shown)].itertuples(index=False))
-    return [PageTable("The analyst's decisions and their effect.", shown, rows, "tables/ledger.csv")]
 
 
 def _counted(number: int, noun: str) -> str:
