@@ -67,7 +67,7 @@ def draw_ratio_diagram(path: Path, pools: dict[str, PoolAnalysis]) -> None:
 
 
 def draw_discordancy(path: Path, pools: dict[str, PoolAnalysis]) -> None:
-    """Draw every gauge's D in a strip per pool, with the critical value; gauges beyond it carry their identifier."""
+    """Draw every gauge's D in a strip per pool, with the critical value; second looks are ringed."""
     figure, axes = new_figure(7.6, 1.3 + 0.6 * len(pools))
     for row, (_, pool) in enumerate(sorted(pools.items())):
         colour, marker = pool_style(row)
@@ -79,11 +79,19 @@ def draw_discordancy(path: Path, pools: dict[str, PoolAnalysis]) -> None:
         )
         if np.isfinite(found.critical):
             axes.vlines(found.critical, row - 0.32, row + 0.32, color=WARM, linewidth=2, zorder=1)
-        for i in np.flatnonzero((found.discordant | found.robust_discordant) & shown):
-            note = pool.gauge_ids[i] + ("" if found.discordant[i] else " (second look)")
-            axes.annotate(
-                note, (found.measure[i], row + jitter[i]), (4, 5), textcoords="offset points", fontsize=7
-            )
+        second = found.masked & shown
+        axes.scatter(
+            found.measure[second],
+            row + jitter[second],
+            s=80,
+            facecolor="none",
+            edgecolor=INK,
+            linewidth=1,
+            zorder=3,
+        )
+        for i in np.flatnonzero(found.discordant & shown):
+            place = (found.measure[i], row + jitter[i])
+            axes.annotate(pool.gauge_ids[i], place, (4, 5), textcoords="offset points", fontsize=7)
         if not shown.any():
             axes.annotate(found.note, (0.05, row), fontsize=8, va="center")
     names = [f"{name} ({len(pool.gauge_ids)})" for name, pool in sorted(pools.items())]

@@ -33,8 +33,8 @@ def homogeneity_section(pools: dict[str, PoolAnalysis], moves: dict[str, str]) -
             ),
             Figure(
                 "discordancy.png",
-                "Discordancy of every gauge within its pool; a bar marks the critical value. A named gauge asks for a "
-                "look at its data first.",
+                "Discordancy of every gauge within its pool; a bar marks the critical value and gauges beyond it are named. "
+                "Rings mark gauges that only the robust second look points to. Look at their data first.",
                 "Strip chart of discordancy by pool with critical values.",
             ),
         ),

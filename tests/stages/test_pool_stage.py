@@ -1,0 +1,187 @@
+"""The stage `pool` on a small study laid down as the stages before it leave it."""
+
+import json
+
+import numpy as np
+import pandas as pd
+import pytest
+
+from wrackline.hydrology.records import exact_records
+from wrackline.stages import pool
+from wrackline.stages.running import StudyFiles
+from wrackline.stats.distributions import gev
+from wrackline.study.config import StudyConfig
+from wrackline.study.contribution import read_contribution
+from wrackline.study.faults import StudyFaults
+from wrackline.study.handover import write_records
+from wrackline.study.tables import read_table, write_table
+
+REGION = {f"{i:02}": "north" if i < 8 else "south" for i in range(16)}
+HOMELESS, SHORT, MOVED, UNUSED = "20", "21", "07", "22"
+REGION |= {HOMELESS: "", SHORT: "south", UNUSED: "south"}
+MOVE = {"gauge_id": MOVED, "to": "south", "why": "drains to the other side of the divide"}
+PIN = {"pool": "south", "distribution": "GPA", "why": "as in the last study"}
+
+
+def lay_down(root, shuffle=None, regions=REGION, **pooling):
+    ids = sorted(regions)
+    rng = np.random.default_rng(11)
+    n = {gauge: 6 if gauge == SHORT else int(rng.integers(25, 50)) for gauge in ids}
+    law = gev.fit(1.0, 0.3, 0.2)
+    flow = {
+        gauge: 50 * (1 + i) * np.maximum(gev.quantile(law, rng.random(n[gauge])), 0.02)
+        for i, gauge in enumerate(ids)
+    }
+    offsets = np.concatenate([[0], np.cumsum([n[gauge] for gauge in ids])])
+    years = np.concatenate([np.arange(2020 - n[gauge], 2020) for gauge in ids])
+    records = exact_records(ids, offsets, years, np.concatenate([flow[gauge] for gauge in ids]))
+    (root / "work" / "dependence").mkdir(parents=True)
+    write_records(root / "work" / "screen" / "records.csv", records)
+    sites = pd.DataFrame(
+        {
+            "gauge_id": ids,
+            "name": ids,
+            "centroid_latitude": 45 + 0.2 * np.arange(len(ids)),
+            "centroid_longitude": 7.0,
+            "region": [regions[gauge] for gauge in ids],
+        }
+    )
+    screened = pd.DataFrame({"gauge_id": ids, "used": [gauge != UNUSED for gauge in ids], "reasons": ""})
+    if shuffle is not None:
+        order = np.random.default_rng(shuffle).permutation(len(ids))
+        sites, screened = sites.iloc[order], screened.iloc[order[::-1]]
+    write_table(root / "work" / "intake" / "gauges.csv", sites)
+    write_table(root / "work" / "screen" / "gauges.csv", screened)
+    model = {"a": 0.0, "b": 0.01, "form": "exponential", "minimum_common_years": 20, "pairs": 40}
+    (root / "work" / "dependence" / "model.json").write_text(json.dumps(model), encoding="utf-8")
+    quick = {"simulations": 200, "close_call_simulations": 200, "growth_simulations": 200}
+    config = StudyConfig.model_validate({"pooling": quick | pooling, "units": {"flow": "ft3/s"}})
+    return StudyFiles(config, root / "study.yaml")
+
+
+@pytest.fixture(scope="module")
+def study(tmp_path_factory):
+    study = lay_down(tmp_path_factory.mktemp("pool"), moves=[MOVE], distributions=[PIN])
+    assert pool.run(study) == "16 gauges in 2 pools"
+    return study
+
+
+@pytest.fixture(scope="module")
+def contribution(study):
+    return read_contribution(study.work("pool"))
+
+
+def table(contribution, name):
+    return next(t.frame for t in contribution.tables if t.name == name)
+
+
+def test_tables_have_the_promised_columns(contribution):
+    promised = {
+        "gauge_lmoments": ["gauge_id", "n", "mean", "lcv", "lskew", "lkurtosis"],
+        "pools": ["pool", "gauge_id", "weight", "discordancy", "critical", "discordant"],
+        "pool_tests": [
+            "pool", "n_gauges", "station_years", "h1", "h2", "h3", "h1_correlated", "simulations", "verdict",
+        ],
+        "pool_distributions": ["pool", "distribution", "z", "accepted", "chosen"],
+        "growth_curves": ["pool", "distribution", "aep", "growth_factor", "lower", "upper"],
+    }  # fmt: skip
+    for name, columns in promised.items():
+        assert columns == list(table(contribution, name).columns[: len(columns)])
+
+
+def test_moves_and_short_records_are_in_the_table_with_their_reasons(contribution):
+    pools = table(contribution, "pools").set_index("gauge_id")
+    assert "south" == pools.loc[MOVED, "pool"]
+    assert "divide" in pools.loc[MOVED, "remark"]
+    assert "6 exactly known systematic peaks, fewer than 10" in pools.loc[SHORT, "remark"]
+    assert 0.0 == pools.loc[SHORT, "weight"]
+    assert not {HOMELESS, UNUSED} & set(pools.index)
+    assert [1.0, 1.0] == pytest.approx(pools.groupby("pool")["weight"].sum().tolist())
+
+
+def test_gauges_without_a_pool_are_warned_of(contribution):
+    assert [HOMELESS] == [
+        fault.problem.rsplit(" ", 1)[1] for fault in contribution.warnings if fault.code == "gauge_in_no_pool"
+    ]
+
+
+def test_a_fixed_law_is_chosen_and_the_evidence_is_told(contribution):
+    laws = table(contribution, "pool_distributions")
+    chosen = laws[laws["chosen"]].set_index("pool")["distribution"]
+    assert "GPA" == chosen["south"]
+    growth = next(s for s in contribution.sections if s.key == "growth")
+    assert any(
+        "fixed by the analyst: as in the last study. The tests would choose" in p for p in growth.paragraphs
+    )
+
+
+def test_means_are_in_the_declared_unit(study, contribution):
+    records = read_table(study.work("screen") / "records.csv")
+    expected = records.loc[records["gauge_id"] == "03", "flow_low"].mean() / 0.3048**3
+    means = table(contribution, "gauge_lmoments").set_index("gauge_id")["mean"]
+    assert expected == pytest.approx(means["03"])
+
+
+def test_growth_file_serves_later_stages(study, contribution):
+    growth = json.loads((study.work("pool") / "growth.json").read_text(encoding="utf-8"))
+    north = growth["pools"]["north"]
+    assert sorted({*study.config.aeps.gauges, *study.config.aeps.targets}, reverse=True) == north["aeps"]
+    assert 1.0 == pytest.approx(north["growth_factor"][north["aeps"].index(0.5)])
+    assert 0.0 == growth["pools"]["south"]["gauges"][SHORT]
+    assert 7 == north["n_gauges"] == len(north["gauges"])
+    assert north["index_relative_sd"] == pytest.approx(1 / (2 * north["density_at_median"]))
+    published = table(contribution, "growth_curves")
+    assert north["upper"] == published.loc[published["pool"] == "north", "upper"].tolist()
+
+
+def test_sections_quote_the_numbers_of_the_tables(contribution):
+    tests = table(contribution, "pool_tests").set_index("pool")
+    words = next(s for s in contribution.sections if s.key == "homogeneity").paragraphs[0]
+    assert f"{tests.loc['north', 'h1']:.2f}".replace("-", "\N{MINUS SIGN}") in words
+    assert tests.loc["north", "verdict"] in words
+
+
+def test_figures_of_the_sections_exist(study, contribution):
+    for section in contribution.sections:
+        assert section.figures
+        for figure in section.figures:
+            assert (study.work("pool") / "figures" / figure.file).stat().st_size > 5000
+
+
+def test_order_of_input_rows_changes_no_byte(study, tmp_path):
+    again = lay_down(tmp_path, shuffle=3, moves=[MOVE], distributions=[PIN])
+    pool.run(again)
+    files = sorted(p.relative_to(study.folder) for p in study.work("pool").rglob("*") if p.is_file())
+    assert len(files) >= 10
+    for file in files:
+        assert (study.folder / file).read_bytes() == (tmp_path / file).read_bytes(), file
+
+
+def test_a_pools_numbers_do_not_depend_on_the_other_pools(study, tmp_path):
+    alone = lay_down(
+        tmp_path, regions={g: r if r != "south" else "" for g, r in REGION.items()}, moves=[MOVE | {"to": ""}]
+    )
+    pool.run(alone)
+    one, other = (
+        json.loads((s.work("pool") / "growth.json").read_text(encoding="utf-8")) for s in (study, alone)
+    )
+    assert one["pools"]["north"] == other["pools"]["north"]
+
+
+def test_all_gauges_together_form_one_pool(tmp_path):
+    study = lay_down(tmp_path)
+    study = StudyFiles(
+        study.config.model_copy(
+            update={"pooling": study.config.pooling.model_copy(update={"regions": "one"})}
+        ),
+        study.study_file,
+    )
+    assert pool.run(study) == "17 gauges in 1 pool"
+
+
+def test_no_region_anywhere_is_a_problem_with_a_mend(tmp_path):
+    study = lay_down(tmp_path, regions=dict.fromkeys(REGION, ""))
+    with pytest.raises(StudyFaults) as faults:
+        pool.run(study)
+    assert ["no_pool"] == [fault.code for fault in faults.value.problems]
+    assert "set pooling.regions to one" in faults.value.problems[0].mend
