@@ -55,7 +55,7 @@ def draw_correlation_with_distance(dependence: Dependence, bins: pd.DataFrame, p
             color=WATER,
             linewidth=1.2,
             linestyle="--",
-            label="other form",
+            label=f"not taken ({FORM_WORDS[dependence.rejected.form]})",
         )
     axes.axhline(0, color=MUTED, linewidth=0.8)
     axes.set_xlim(0, reach)

@@ -15,7 +15,8 @@ BlockDistance = Callable[[IntArray, IntArray], FloatArray]
 """Gives the distances (p, q) between the records numbered in (p,) and those numbered in (q,)."""
 
 CONSTANT = 1e-11
-"""A record whose squared deviations over the shared years are below this share of its squares is constant."""
+"""A pair of which one record's squared deviations over the shared years are below this share of its squares has no
+correlation: the record is constant there, and what varies is rounding."""
 IDENTICAL = 1 - 1e-6
 """Correlations above this belong to copies of one record, not to two gauges."""
 
@@ -144,27 +145,33 @@ def pair_blocks(values: ArrayLike, block: int = 256, minimum: int = 3) -> Iterat
     minimum : int
         At least 2.
     """
-    values = np.asarray(values, dtype=float)
-    mask, x = _standardized(values)
-    square = x * x
-    starts = range(0, len(values), block)
-    for i in starts:
-        rows = slice(i, i + block)
-        for j in range(i, len(values), block):
-            columns = slice(j, j + block)
-            n = mask[rows] @ mask[columns].T
-            sum_i, sum_j = x[rows] @ mask[columns].T, mask[rows] @ x[columns].T
+    known, x = _standardized(np.asarray(values, dtype=float))
+    g = len(x)
+    for i in range(0, g, block):
+        rows = np.arange(i, min(i + block, g))
+        x_i, mask_i, single_i = (
+            x[i : i + block],
+            known[i : i + block].astype(float),
+            known[i : i + block].astype("f4"),
+        )
+        sums_i = np.concatenate([x_i, x_i * x_i])
+        for j in range(i, g, block):
+            columns = np.arange(j, min(j + block, g))
+            x_j, mask_j = x[j : j + block], known[j : j + block].astype(float)
+            # Counts of years are exact in single precision, at half the cost.
+            n = single_i @ known[j : j + block].astype("f4").T
+            over_i = sums_i @ mask_j.T
+            over_j = mask_i @ np.concatenate([x_j, x_j * x_j]).T
             r = _correlation(
                 n,
-                x[rows] @ x[columns].T,
-                sum_i,
-                sum_j,
-                square[rows] @ mask[columns].T,
-                mask[rows] @ square[columns].T,
+                x_i @ x_j.T,
+                over_i[: len(rows)],
+                over_j[:, : len(columns)],
+                over_i[len(rows) :],
+                over_j[:, len(columns) :],
                 minimum,
             )
-            numbers = np.arange(i, min(i + block, len(values))), np.arange(j, min(j + block, len(values)))
-            yield PairBlock(*numbers, r, n.astype(np.int32))
+            yield PairBlock(rows, columns, r, n.astype(np.int32))
 
 
 def list_pairs(values: ArrayLike, minimum: int, block: int = 256) -> ConcurrentPairs:
@@ -247,18 +254,20 @@ def bin_pairs(
     )
 
 
-def _standardized(values: FloatArray) -> tuple[FloatArray, FloatArray]:
+def _standardized(values: FloatArray) -> tuple[BoolArray, FloatArray]:
     """Mask of known values, and the values less their mean over their spread, zero where unknown."""
     known = np.isfinite(values)
     n = np.maximum(known.sum(axis=1, keepdims=True), 1)
     x = np.where(known, values, 0.0)
-    x = np.where(known, x - x.sum(axis=1, keepdims=True) / n, 0.0)
-    spread = np.sqrt((x * x).sum(axis=1, keepdims=True) / n)
-    return known.astype(float), x / np.where(spread > 0, spread, 1.0)
+    x -= x.sum(axis=1, keepdims=True) / n
+    x[~known] = 0.0
+    spread = np.sqrt(np.einsum("ij,ij->i", x, x)[:, None] / n)
+    x /= np.where(spread > 0, spread, 1.0)
+    return known, x
 
 
 def _correlation(
-    n: FloatArray,
+    n: NDArray[np.float32],
     products: FloatArray,
     sum_i: FloatArray,
     sum_j: FloatArray,
@@ -267,22 +276,24 @@ def _correlation(
     minimum: int,
 ) -> FloatArray:
     """Pearson correlation from the sums over shared years; overwrites its arguments except ``n``."""
-    square_i *= n
-    square_j *= n
     products *= n
     products -= sum_i * sum_j
+    square_i *= n
+    square_j *= n
     sum_i *= sum_i
     sum_j *= sum_j
     np.subtract(square_i, sum_i, out=sum_i)
     np.subtract(square_j, sum_j, out=sum_j)
-    unusable = n < minimum
-    unusable |= sum_i <= CONSTANT * square_i
-    unusable |= sum_j <= CONSTANT * square_j
     sum_i *= sum_j
-    sum_i[unusable] = np.nan
+    square_i *= square_j
+    square_i *= CONSTANT
+    unusable = sum_i <= square_i
+    unusable |= n < minimum
+    np.putmask(sum_i, unusable, np.nan)
     np.sqrt(sum_i, out=sum_i)
     products /= sum_i
-    return np.clip(products, -1.0, 1.0, out=products)
+    np.minimum(products, 1.0, out=products)
+    return np.maximum(products, -1.0, out=products)
 
 
 def _density_cell(r: FloatArray, d: FloatArray, edges: FloatArray, density: tuple[int, int]) -> IntArray:
