@@ -96,7 +96,7 @@ def estimate_between_sites(
     0.25 to 0.95 for the correlation. Spread and skew are tied because in log-normal and log-Pearson floods
     the same differences between basins raise both, and because short records say little about L-skew.
     With their mode at zero the priors let a homogeneous pool come near zero but not reach it. In simulated
-    regions 90 % intervals built on them hold 83 to 96 % of the true curves where sites differ, and nearly all
+    regions 90 % intervals built on them hold 83 to 98 % of the true curves where sites differ, and nearly all
     where they do not: no data of this size can tell the two apart with certainty.
     """
     sampling = _sampling_covariance(years, simulated)
