@@ -8,7 +8,8 @@ from __future__ import annotations
 
 import time
 import warnings
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
+from typing import Any
 
 import numpy as np
 from scipy.integrate import quad
@@ -17,14 +18,16 @@ from scipy.stats import CensoredData, nct
 from scipy.stats import pearson3 as scipy_pearson3
 
 from wrackline.hydrology.at_site import fit_records
-from wrackline.hydrology.at_site_bootstrap import bootstrap_fit, draw_samples
+from wrackline.hydrology.at_site_bootstrap import draw_samples
 from wrackline.hydrology.records import exact_records
 from wrackline.stats.censored_sample import CensoredSample, compress_sample
 from wrackline.stats.expected_moments import fit_expected_moments
-from wrackline.stats.low_outliers import approximate_low_outlier_p
+from wrackline.stats.low_outliers import _nodes, approximate_low_outlier_p
 from wrackline.stats.moment_covariance import group_thresholds
 from wrackline.stats.pearson3 import frequency_factor
 from wrackline.stats.streams import random_stream
+
+Row = dict[str, Any]
 
 
 def cpu(work: Callable[[], object]) -> float:
@@ -33,17 +36,25 @@ def cpu(work: Callable[[], object]) -> float:
     return time.process_time() - start
 
 
-def ratios(
-    work: Callable[[], object], floor: Callable[[], object], repeats: int = 7
-) -> tuple[float, float, float]:
+def ratios(work: Callable[[], object], floor: Callable[[], object], repeats: int = 7) -> list[float]:
     """Median, smallest and largest ratio of CPU times, the two interleaved."""
     work(), floor()
     found = sorted(cpu(work) / max(np.mean([cpu(floor) for _ in range(3)]), 1e-7) for _ in range(repeats))
-    return float(np.median(found)), found[0], found[-1]
+    return [float(np.median(found)), found[0], found[-1]]
 
 
-def say(name: str, found: tuple[float, float, float], target: str) -> None:
-    print(f"{name:62s} {found[0]:9.2f}  ({found[1]:.2f} to {found[2]:.2f})   target {target}", flush=True)
+def row(kernel: str, size: str, floor: str, found: list[float], target: str, scale: float = 1.0) -> Row:
+    """One line of the table."""
+    median, low, high = (scale * x for x in found)
+    return {
+        "kernel": kernel,
+        "size": size,
+        "floor": floor,
+        "ratio": median,
+        "ratio_min": low,
+        "ratio_max": high,
+        "target": target,
+    }
 
 
 def censored_records(gauges: int) -> tuple[CensoredSample, np.ndarray, tuple[np.ndarray, ...]]:
@@ -120,14 +131,11 @@ def careful_p(n: int, k: int, eta: float) -> float:
     return quad(given, 0, 1, limit=100)[0]
 
 
-def bench_fits() -> None:
+def measure_fits() -> Iterator[Row]:
     thousand, skew, rows = censored_records(1000)
     floor = incomplete_gammas(thousand, skew)
-    say(
-        "4  1,000 censored fits / one incomplete gamma each",
-        ratios(lambda: fit_expected_moments(thousand), floor),
-        "<= 100",
-    )
+    found = ratios(lambda: fit_expected_moments(thousand), floor)
+    yield row("expected moments", "1,000 gauges", "one incomplete gamma a threshold", found, "at most 100")
     own, low, high = rows
     cut = np.searchsorted(own, np.arange(51))
 
@@ -135,47 +143,49 @@ def bench_fits() -> None:
         for i in range(50):
             loop_fit(low[cut[i] : cut[i + 1]], high[cut[i] : cut[i + 1]])
 
-    fifty = ratios(loop, lambda: fit_expected_moments(thousand), 5)
-    say("4  user's loop (scaled from 50 gauges) / ours", tuple(20 * x for x in fifty), ">= 50")
+    found = ratios(loop, lambda: fit_expected_moments(thousand), 5)
+    yield row("loop over gauges", "50, scaled to 1,000", "expected moments", found, "at least 50", 20)
     batch, skew, _ = censored_records(10_000)
-    growth = ratios(lambda: fit_expected_moments(batch), lambda: fit_expected_moments(thousand))
-    say("4b growth exponent from 1,000 to 10,000 fits", tuple(np.log10(x) for x in growth), "<= 1.05")
-    data = CensoredData(
-        uncensored=low[: cut[1]][np.isfinite(low[: cut[1]])], left=high[: cut[1]][np.isinf(low[: cut[1]])]
-    )
+    found = ratios(lambda: fit_expected_moments(batch), lambda: fit_expected_moments(thousand))
+    exponent = [float(np.log10(x)) for x in found]
+    yield row("growth exponent", "10,000 gauges", "1,000 gauges", exponent, "at most 1.05")
+    first, known = slice(0, cut[1]), np.isfinite(low[: cut[1]])
+    data = CensoredData(uncensored=low[first][known], left=high[first][~known])
     with warnings.catch_warnings():
         warnings.simplefilter("ignore")
-        once = ratios(lambda: scipy_pearson3.fit(data), lambda: fit_expected_moments(thousand), 3)
-    say(
-        "4b scipy's censored likelihood fit (one gauge x 1,000) / ours",
-        tuple(1000 * x for x in once),
-        ">= 5,000",
+        found = ratios(lambda: scipy_pearson3.fit(data), lambda: fit_expected_moments(thousand), 3)
+    yield row(
+        "likelihood fit of scipy", "1, scaled to 1,000", "expected moments", found, "at least 5,000", 1000
     )
-    fit = fit_expected_moments(batch)
-    print(
-        f"   evaluations: median {np.median(fit.iterations):.0f}, largest {fit.iterations.max()}; settled {fit.converged.sum()} of 10,000"
-    )
+    settled = int(fit_expected_moments(batch).converged.sum())
+    yield row("fits that settled", "10,000 gauges", "all", [settled / 10_000] * 3, "1")
 
 
-def bench_low_outliers() -> None:
+def measure_low_outliers() -> Iterator[Row]:
+    def ours() -> None:
+        for k in range(10, 20):
+            approximate_low_outlier_p(60, k, -2.1)
+
+    def ours_afresh() -> None:
+        _nodes.cache_clear()
+        ours()
+
     with warnings.catch_warnings():
         warnings.simplefilter("ignore")
-        found = ratios(
-            lambda: careful_p(60, 10, -2.1),
-            lambda: [approximate_low_outlier_p(60, 10, -2.1) for _ in range(20)],
-            5,
-        )
-    say("5  careful quadrature with scipy's noncentral t / ours", tuple(20 * x for x in found), ">= 15")
+        found = ratios(lambda: careful_p(60, 10, -2.1), ours, 5)
+        afresh = ratios(lambda: careful_p(60, 10, -2.1), ours_afresh, 5)
+    yield row("adaptive quadrature", "one p-value", "ours, sample size seen before", found, "at least 15", 10)
+    yield row("adaptive quadrature", "one p-value", "ours, first of its size", afresh, "at least 15", 10)
     eta = -np.geomspace(0.2, 100, 40)
     bad = sum(
-        int(~np.isfinite(approximate_low_outlier_p(n, k, eta)).all())
+        not np.isfinite(approximate_low_outlier_p(n, k, eta)).all()
         for n in range(10, 201)
         for k in range(1, n // 2 + 1, 3)
     )
-    print(f"   p-values that are not numbers, n = 10 to 200: {bad}")
+    yield row("p-values not a number", "10 to 200 years", "none", [float(bad)] * 3, "0")
 
 
-def bench_bootstrap() -> None:
+def measure_bootstrap() -> Iterator[Row]:
     stream = random_stream(1, "bench_bootstrap")
     n, replicates = 60, 1000
     x = 3 + 0.3 * frequency_factor(stream.random(n), 0.4)
@@ -183,44 +193,42 @@ def bench_bootstrap() -> None:
     classes = group_thresholds(np.zeros(n, dtype=int), np.full(n, base), np.full(n, np.inf), 1)
 
     def ours() -> object:
-        return fit_expected_moments(
-            draw_samples(classes, 3.0, 0.3, 0.4, replicates, stream), tolerance=1e-5, parent=(3.0, 0.3, 0.4)
-        )
+        samples = draw_samples(classes, 3.0, 0.3, 0.4, replicates, stream)
+        return fit_expected_moments(samples, tolerance=1e-4, parent=(3.0, 0.3, 0.4))
 
-    gammas = ratios(ours, lambda: stream.standard_gamma(25.0, size=(replicates, n)))
-    say("9  bootstrap of one censored gauge / drawing its gammas", gammas, "<= 6")
+    found = ratios(ours, lambda: stream.standard_gamma(25.0, size=(replicates, n)), 11)
+    yield row("bootstrap, 20 % censored", "1,000 replicates", "drawing the gammas", found, "at most 6")
 
     def loop() -> None:
         for _ in range(25):
             y = 3 + 0.06 * (stream.standard_gamma(25.0, size=n) - 25)
             loop_fit(np.where(y < base, -np.inf, y), np.maximum(y, base))
 
-    say(
-        "9  user's loop (scaled from 25 replicates) / ours",
-        tuple(40 * x for x in ratios(loop, ours, 5)),
-        ">= 40",
-    )
-    records = exact_records(["g"], np.array([0, n]), np.arange(n), 10**x)
-    fits = fit_records(records, 0.1, 0.15)
-    print(
-        f"   whole bootstrap of one gauge with weighted skew: {1000 * cpu(lambda: bootstrap_fit(fits, 0, 1000, stream)):.0f} ms of CPU"
-    )
+    found = ratios(loop, ours, 5)
+    yield row("loop over replicates", "25, scaled to 1,000", "bootstrap", found, "at least 40", 40)
 
 
-def bench_chain() -> None:
-    stream = random_stream(1, "bench_chain")
-    for gauges in (1000, 5000):
-        n = stream.integers(20, 101, gauges)
-        offsets = np.concatenate([[0], np.cumsum(n)])
+def measure_chain() -> Iterator[Row]:
+    def chain(gauges: int) -> Callable[[], object]:
+        stream = random_stream(1, "bench_chain", str(gauges))
+        offsets = np.concatenate([[0], np.cumsum(stream.integers(20, 101, gauges))])
         x = 10 ** (3 + 0.3 * frequency_factor(stream.random(offsets[-1]), 0.1))
         records = exact_records([str(i) for i in range(gauges)], offsets, np.arange(len(x)), x)
-        print(
-            f"   whole chain with weighted skew and limits, {gauges} gauges: {cpu(lambda r=records: fit_records(r, 0.1, 0.15)):.2f} s of CPU"
-        )
+        return lambda: fit_records(records, 0.1, 0.15)
+
+    found = ratios(chain(4000), chain(500), 3)
+    exponent = [float(np.log(x) / np.log(8)) for x in found]
+    yield row("whole chain, growth exponent", "4,000 gauges", "500 gauges", exponent, "at most 1.05")
+
+
+def measure() -> list[Row]:
+    """Rows of all at-site kernels."""
+    return [*measure_fits(), *measure_low_outliers(), *measure_bootstrap(), *measure_chain()]
 
 
 if __name__ == "__main__":
-    bench_fits()
-    bench_low_outliers()
-    bench_bootstrap()
-    bench_chain()
+    for line in measure():
+        print(
+            f"{line['kernel']} ({line['size']}): {line['ratio']:.2f} x {line['floor']} "
+            f"[{line['ratio_min']:.2f}, {line['ratio_max']:.2f}], target {line['target']}"
+        )

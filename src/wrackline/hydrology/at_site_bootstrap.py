@@ -18,7 +18,7 @@ from wrackline.stats.pearson3 import EXPANSION_SKEW, frequency_factor
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
-_TOLERANCE = 1e-5
+_TOLERANCE = 1e-4
 
 
 @dataclass(frozen=True)

@@ -10,6 +10,9 @@ FloatArray = NDArray[np.float64]
 POLYNOMIAL_LIMIT = np.sqrt(2.0)
 """Largest absolute skew for which the Griffis-Stedinger polynomial is used."""
 
+SHORTEST_RECORD = 10.0
+"""Fewest years for which polynomial and simulated values hold."""
+
 _SIMULATED_YEARS = np.array([10, 15, 20, 30, 40, 60, 80, 120, 200], dtype=float)
 _SIMULATED_SKEWS = np.array([1.4, 1.6, 1.8, 2.0, 2.25, 2.5, 2.75, 3.0])
 # Mean square error of the bias-corrected skew about the true one, 40,000 Pearson III samples a cell
@@ -81,10 +84,13 @@ def station_skew_mse(n: ArrayLike, skew: ArrayLike) -> FloatArray:
     Notes
     -----
     The Griffis-Stedinger polynomial up to an absolute skew of 1.41. Beyond it the polynomial is far too small
-    (n = 25, skew 3: 0.25 against 0.59 or more), so simulated mean square errors take over, with a gradual change between
-    1.41 and 1.6.
+    (n = 25, skew 3: 0.25 against a simulated mean square error of 1.46), so simulation takes over, gradually between
+    1.41 and 1.6. Under 10 years, where the polynomial can turn negative, the value of 10 years grows as one over the
+    years.
     """
     n, skew = np.broadcast_arrays(np.asarray(n, dtype=float), np.asarray(skew, dtype=float))
+    if (n < SHORTEST_RECORD).any():
+        return station_skew_mse(np.maximum(n, SHORTEST_RECORD), skew) * np.maximum(SHORTEST_RECORD / n, 1.0)
     size = np.abs(skew)
     mse = griffis_stedinger_variance(n, np.minimum(size, POLYNOMIAL_LIMIT))
     beyond = size > POLYNOMIAL_LIMIT
