@@ -14,7 +14,6 @@ from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.interpolate import CubicSpline
 from scipy.special import betaln, gammaln, log_ndtr
 
 FloatArray = NDArray[np.float64]
@@ -112,6 +111,9 @@ def _log_radial_integral(n: int, k: int, cosine: FloatArray) -> FloatArray:
 
 def _log_largest_deviation_cdf(n: int, t: FloatArray) -> FloatArray:
     """Logarithm of the probability that ``(largest - mean) / sd`` of `n` normal values is at most `t`."""
+    # The import costs a quarter of a second, which most runs need not pay.
+    from scipy.interpolate import CubicSpline
+
     if n == 2:
         return np.where(t >= np.sqrt(0.5), 0.0, -np.inf)
     angle, log_cdf = _deviation_table(n)
