@@ -177,6 +177,57 @@ class AtSite(_Part):
     )
 
 
+class Skew(_Part):
+    """Generalized skew: which gauges shape it, which models are tried, and how it enters the fits."""
+
+    source: Literal["fitted", "constant", "map"] = Field(
+        "fitted", description="`fitted`: from this study's gauges; `constant`: the given skew and mean square error; `map`: a given GeoTIFF."
+    )
+    minimum_record_years: float = Field(
+        25.0, ge=12, description="Pseudo record length a gauge needs to shape the model, years (common practice: 25 to 35)."
+    )
+    exclude: tuple[Literal[SCREENING_FLAGS], ...] = Field(  # type: ignore[valid-type]
+        ("trend", "change_point"),
+        description="Screening flags that keep a gauge out of the model although the study uses it.",
+    )
+    regressions: tuple[tuple[str, ...], ...] = Field(
+        (), description="Sets of attributes to try; none named: `area` and every declared attribute, one at a time."
+    )
+    by_region: bool = Field(True, description="Try a constant for every region.")
+    surface: bool = Field(True, description="Try a surface on which neighbouring gauges inform each other.")
+    model: str = Field(
+        "", description="The model to use (`constant`, `region`, `surface`, or its attributes joined by ` + `); blank: the evidence decides."
+    )
+    why: str = Field("", description="Reason for a fixed model or a given skew; printed in the report.")
+    given_skew: float | None = Field(None, description="With `source: constant`: the generalized skew.")
+    given_mse: float | None = Field(None, gt=0, description="With `source: constant`: its mean square error.")
+    given_map: str = Field(
+        "", description="With `source: map`: a GeoTIFF in longitude and latitude, band 1 skew, band 2 mean square error."
+    )
+    map_cell_degrees: float | None = Field(None, gt=0, description="Cell of the skew map, degrees; blank: about 100 cells across.")
+    map_reach_km: float | None = Field(
+        None, gt=0, description="The map is blank farther than this from every gauge of the model; blank: twice the distance within which nine of ten of them have a neighbour."
+    )
+    adopted: Literal["weighted_skew", "station"] = Field(
+        "weighted_skew", description="The fit whose floods the study adopts at gauges."
+    )
+
+    @property
+    def attributes(self) -> tuple[str, ...]:
+        """Attributes that the named regressions use."""
+        return tuple(dict.fromkeys(name for names in self.regressions for name in names))
+
+    @model_validator(mode="after")
+    def _what_is_given_is_whole(self) -> Skew:
+        if self.source == "constant" and (self.given_skew is None or self.given_mse is None):
+            raise ValueError("source: constant needs given_skew and given_mse")
+        if self.source == "map" and not self.given_map:
+            raise ValueError("source: map needs given_map")
+        if (self.model or self.source != "fitted") and len(self.why.strip()) < 3:
+            raise ValueError("a fixed model or a given skew needs a reason in `why`")
+        return self
+
+
 class Move(_Part):
     """A gauge that the analyst puts into another region than the inputs say."""
 
@@ -239,6 +290,7 @@ class StudyConfig(_Part):
     screening: Screening = Field(default_factory=Screening, description=Screening.__doc__ or "")
     dependence: Dependence = Field(default_factory=Dependence, description=Dependence.__doc__ or "")
     at_site: AtSite = Field(default_factory=AtSite, description=AtSite.__doc__ or "")
+    skew: Skew = Field(default_factory=Skew, description=Skew.__doc__ or "")
     pooling: Pooling = Field(default_factory=Pooling, description=Pooling.__doc__ or "")
     index_flood: IndexFlood = Field(default_factory=IndexFlood, description=IndexFlood.__doc__ or "")
 
@@ -247,6 +299,9 @@ class StudyConfig(_Part):
         unknown = [name for name in self.index_flood.attributes if name != "area" and name not in self.attributes]
         if unknown:
             raise ValueError(f"index_flood.attributes names {unknown}, which `attributes` does not declare")
+        unknown = [name for name in self.skew.attributes if name != "area" and name not in self.attributes]
+        if unknown:
+            raise ValueError(f"skew.regressions names {unknown}, which `attributes` does not declare")
         return self
 
     @model_validator(mode="after")
