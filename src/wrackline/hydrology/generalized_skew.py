@@ -7,6 +7,7 @@ from typing import Literal
 
 import numpy as np
 
+from wrackline.hydrology.dependence import repair_correlation
 from wrackline.hydrology.records import FloatArray
 from wrackline.stats.gls import spread, turn_system
 from wrackline.stats.model_error_posterior import VariancePosterior, posterior_of_model_variance
@@ -14,6 +15,8 @@ from wrackline.stats.skew_variance import griffis_stedinger_variance
 
 SKEW_CORRELATION_EXPONENT = 3.0
 """Correlation of two sample skews is that of the logs to this power: exact for normal logs (decisions of the project)."""
+SMALLEST_EIGENVALUE = 1e-8
+"""Of the correlation of sampling errors; below it (copies of a record) the matrix is repaired."""
 
 
 @dataclass(frozen=True)
@@ -26,12 +29,15 @@ class StationSkews:
     record_length : pseudo record length P, years
     variance : sampling variances of ``skew`` at a regional skew, never the station's own
     covariance : sampling covariance of ``skew``
+    repaired : True where the correlation of sampling errors could not be factored and the nearest one that can
+        stands in its place
     """
 
     skew: FloatArray
     record_length: FloatArray
     variance: FloatArray
     covariance: FloatArray
+    repaired: bool = False
 
 
 @dataclass(frozen=True)
@@ -55,6 +61,8 @@ class SkewModel:
     fitted, residuals : (n,)
     leave_one_out, leave_one_out_variance : (n,)
         Generalized skew at every site from the model without it, and its variance of prediction.
+    leave_one_out_log_density : (n,)
+        Of every station skew under the model without it.
     """
 
     stations: StationSkews
@@ -70,6 +78,7 @@ class SkewModel:
     residuals: FloatArray
     leave_one_out: FloatArray
     leave_one_out_variance: FloatArray
+    leave_one_out_log_density: FloatArray
 
     def predict(self, design: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Return generalized skews and their variances of prediction at new sites, ``design`` (m, k)."""
@@ -106,9 +115,22 @@ def prepare_station_skews(
     variance = inflation**2 * griffis_stedinger_variance(record_length, regional)
     overlap = np.minimum(common_years / np.sqrt(np.outer(record_length, record_length)), 1.0)
     shared = np.sign(correlation) * overlap * np.abs(correlation) ** SKEW_CORRELATION_EXPONENT
+    np.fill_diagonal(shared, 1.0)
+    repaired = not _factorable(shared)
+    if repaired:
+        shared, _ = repair_correlation(shared, SMALLEST_EIGENVALUE)
     covariance = shared * np.sqrt(np.outer(variance, variance))
     np.fill_diagonal(covariance, variance)
-    return StationSkews(skew, record_length, variance, covariance)
+    return StationSkews(skew, record_length, variance, covariance, repaired)
+
+
+def _factorable(correlation: FloatArray) -> bool:
+    """Whether all eigenvalues exceed the smallest accepted, told by a Cholesky factoring."""
+    try:
+        np.linalg.cholesky(correlation - SMALLEST_EIGENVALUE * np.eye(len(correlation)))
+    except np.linalg.LinAlgError:
+        return False
+    return True
 
 
 def fit_skew_model(
@@ -148,7 +170,11 @@ def fit_skew_model(
 
     hat = design @ weights
     own = np.diag(hat)
-    without_own = (hat - np.diag(own)) / (1.0 - own)[:, None]
+    # A site that alone carries a coefficient (leverage 1) cannot be left out: its leave-one-out values are NaN.
+    with np.errstate(divide="ignore", invalid="ignore"):
+        without_own = np.where((own < 1.0 - 1e-10)[:, None], (hat - np.diag(own)) / (1.0 - own)[:, None], np.nan)
+    loo = without_own @ stations.skew
+    loo_variance = posterior.mean + np.einsum("ij,ij->i", without_own @ cover, without_own)
     return SkewModel(
         stations=stations,
         design=design,
@@ -161,6 +187,46 @@ def fit_skew_model(
         marginal_model_variance=marginal.mean,
         fitted=fitted,
         residuals=stations.skew - fitted,
-        leave_one_out=without_own @ stations.skew,
-        leave_one_out_variance=posterior.mean + np.einsum("ij,ij->i", without_own @ cover, without_own),
+        leave_one_out=loo,
+        leave_one_out_variance=loo_variance,
+        leave_one_out_log_density=score_left_out(stations, loo, loo_variance, without_own),
     )
+
+
+def score_left_out(
+    stations: StationSkews, predicted: FloatArray, variance: FloatArray, weights: FloatArray
+) -> FloatArray:
+    """Return the log density (n,) of every station skew under the normal prediction from the other stations.
+
+    Parameters
+    ----------
+    stations : StationSkews of n sites
+    predicted, variance : (n,)
+        Of the true skew at every station from the others.
+    weights : (n, n)
+        ``predicted = weights @ skew``, with a zero diagonal.
+
+    Notes
+    -----
+    A station skew errs about the true one by its sampling variance; neighbours share part of that error, which
+    is taken off twice, for the others' errors are in the prediction.
+    """
+    shared = np.einsum("ij,ij->i", weights, stations.covariance)
+    spread_of_difference = variance + stations.variance - 2.0 * shared
+    difference = stations.skew - predicted
+    return -0.5 * (np.log(2 * np.pi * spread_of_difference) + difference**2 / spread_of_difference)
+
+
+def generalized_skew_error_covariance(model: SkewModel, design: FloatArray) -> FloatArray:
+    """Return the covariance (m, m) of the errors of generalized skews at m sites, ``design`` (m, k).
+
+    The error of the coefficients is common to all sites; the model error is each site's own.
+    """
+    return combine_skew_errors(model.coefficient_covariance, model.model_variance, design)
+
+
+def combine_skew_errors(
+    coefficient_covariance: FloatArray, model_variance: float, design: FloatArray
+) -> FloatArray:
+    """Return ``X C X' + s2 I`` (m, m): what `generalized_skew_error_covariance` does, from a saved model."""
+    return design @ coefficient_covariance @ design.T + model_variance * np.eye(len(design))

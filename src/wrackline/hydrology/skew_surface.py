@@ -6,7 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from wrackline.hydrology.generalized_skew import StationSkews
+from wrackline.hydrology.generalized_skew import StationSkews, score_left_out
 from wrackline.hydrology.records import FloatArray
 from wrackline.stats.model_error_posterior import quadrature
 
@@ -32,6 +32,8 @@ class SkewSurface:
     residuals : (n,)
     leave_one_out, leave_one_out_variance : (n,)
         Skew at every station from the surface without it, and its variance of prediction.
+    leave_one_out_log_density : (n,)
+        Of every station skew under the surface without it.
     """
 
     stations: StationSkews
@@ -45,6 +47,12 @@ class SkewSurface:
     residuals: FloatArray
     leave_one_out: FloatArray
     leave_one_out_variance: FloatArray
+    leave_one_out_log_density: FloatArray
+
+    @property
+    def fitted(self) -> FloatArray:
+        """The surface at the stations themselves: the best prediction of their true skews, (n,)."""
+        return self.stations.skew - self.stations.covariance @ (self.precision @ self.residuals)
 
     def predict(self, design: FloatArray, distance_km: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Return skews and their variances of prediction at new sites.
@@ -147,7 +155,7 @@ def _surface_at(
     precision = np.linalg.inv(shared + stations.covariance)
     covariance = np.linalg.inv(design.T @ precision @ design)
     coefficients = covariance @ (design.T @ (precision @ stations.skew))
-    mean, spread = _leave_one_out(stations.skew, design, shared, precision, variance)
+    mean, spread, weights = _leave_one_out(stations.skew, design, shared, precision, variance)
     return SkewSurface(
         stations=stations,
         design=design,
@@ -160,13 +168,16 @@ def _surface_at(
         residuals=stations.skew - design @ coefficients,
         leave_one_out=mean,
         leave_one_out_variance=spread,
+        leave_one_out_log_density=score_left_out(stations, mean, spread, weights),
     )
 
 
 def _leave_one_out(
     y: FloatArray, design: FloatArray, shared: FloatArray, precision: FloatArray, variance: float
-) -> tuple[FloatArray, FloatArray]:
+) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Predict the true skew at every station from the others, at fixed variance and range.
+
+    Returns predictions, their variances, and the weights (n, n) of the station skews in them.
 
     Without station i the precision is ``K - k k' / K_ii`` on the others (block inversion), so all stations
     follow from products of whole matrices.
@@ -175,15 +186,16 @@ def _leave_one_out(
     near = shared - np.diag(np.diag(shared))
     pull = near @ precision
     self_pull = np.diag(pull)
-    weighted_x, weighted_y = precision @ design, precision @ y
+    weighted_x = precision @ design
 
-    pull_y = pull @ y - self_pull * weighted_y / own
+    outer_pull = pull - (self_pull / own)[:, None] * precision
     pull_x = pull @ design - (self_pull / own)[:, None] * weighted_x
     pull_near = np.einsum("ij,ij->i", pull, near) - self_pull**2 / own
     information = design.T @ weighted_x - weighted_x[:, :, None] * weighted_x[:, None, :] / own[:, None, None]
-    right = design.T @ weighted_y - weighted_x * (weighted_y / own)[:, None]
-    b = np.linalg.solve(information, right[:, :, None])[:, :, 0]
     rest = design - pull_x
-    mean = np.einsum("ik,ik->i", rest, b) + pull_y
-    grown = np.einsum("ik,ik->i", rest, np.linalg.solve(information, rest[:, :, None])[:, :, 0])
-    return mean, variance - pull_near + grown
+    load = np.linalg.solve(information, rest[:, :, None])[:, :, 0]
+    own_share = np.einsum("ik,ik->i", load, weighted_x) / own
+    weights = outer_pull + load @ weighted_x.T - own_share[:, None] * precision
+    np.fill_diagonal(weights, 0.0)
+    grown = np.einsum("ik,ik->i", rest, load)
+    return weights @ y, variance - pull_near + grown, weights
