@@ -34,7 +34,7 @@ def test_four_peaks_are_fitted_flagged_and_can_be_bootstrapped():
     fits = fit_records(
         exact_records(["a"], np.array([0, 4]), np.arange(4), np.array([1.0, 2, 3, 7])), 0.0, 0.1
     )
-    assert [warning.code for warning in fits.warnings[0]] == ["few_peaks"]
+    assert [warning.code for warning in fits.warnings[0]] == ["few_peaks", "limits_untested"]
     assert bootstrap_fit(fits, 0, 50, random_stream(1, "test_four")).refused < 5
 
 

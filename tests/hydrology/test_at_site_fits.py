@@ -179,6 +179,16 @@ def test_short_and_strongly_skewed_records_carry_warnings():
     assert {"large_skew", "skews_differ"} <= {warning.code for warning in fits.warnings[1]}
 
 
+def test_limits_outside_what_was_simulated_are_flagged():
+    ordinary, short = peaks(60, 0.1, "ordinary"), peaks(30, 0.1, "brief")
+
+    def flagged(fits):
+        return ["limits_untested" in [warning.code for warning in some] for some in fits.warnings]
+
+    assert [False, False] == flagged(fit_records(records(ordinary, short), 0.1, 0.15))
+    assert [False, True] == flagged(fit_records(records(ordinary, short)))
+
+
 def test_clamp_of_the_skew_is_an_option_that_leaves_a_warning():
     skewed = np.append(10 ** np.linspace(1.9, 2.1, 30), [1500.0, 2500.0])
     fits = fit_records(records(skewed), skew_bound=1.41)

@@ -73,7 +73,15 @@ def fit_records(
     -----
     Bulletin 17C (England and others, 2019): low floods by the multiple Grubbs-Beck test, expected moments
     (Cohn, Lane and Baier, 1997), generalized skew inside the iteration (Griffis, Stedinger and Cohn, 2004),
-    limits after Cohn, Lane and Stedinger (2001).
+    limits after Cohn, Lane and Stedinger (2001). The error of a censored record's skew is that of a complete record of
+    as many years times the ratio of the asymptotic variances with and without censoring (our reading).
+
+    Coverage of 90 % limits, the whole chain simulated 2,000 times a case (25 to 100 systematic years, skew -0.7 to
+    1.0, none or 30 % below a gauge base, none or 100 historic years, probabilities 0.1, 0.01, 0.002; generalized skew
+    with mean square error 0.15): with the weighted skew 88.4 to 93.6 % in all 240 cases, each tail 1.8 to 9.0 %. With the
+    station skew alone 85.7 to 93.9 % from 40 years on; at 25 years with a negative skew and a historic
+    period as little as 78 %, the lower limit being too high. The table lies beside the command that makes it,
+    tests/benchmarks/coverage_at_site.py.
     """
     if (generalized_skew is None) != (generalized_skew_mse is None):
         raise ValueError("a generalized skew needs its mean square error, and the other way round")

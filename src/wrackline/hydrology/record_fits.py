@@ -18,6 +18,9 @@ FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
 FEW_PEAKS = 10
+# Records and skews for which the coverage of the limits was simulated and found good.
+TESTED_SKEWS = (-0.7, 1.0)
+TESTED_YEARS_WEIGHTED, TESTED_YEARS_STATION = 25, 40
 
 
 @dataclass(frozen=True)
@@ -155,11 +158,18 @@ def choose_fit(
 
 def add_warnings(fits: RecordFits) -> RecordFits:
     """Return the fits with what is odd about each gauge put into words."""
-    beyond = fits.best.moments.beyond_support
-    return replace(fits, warnings=tuple(tuple(_warn(fits, i, beyond)) for i in range(len(fits.gauge_ids))))
+    best = fits.best.moments
+    return replace(
+        fits,
+        warnings=tuple(
+            tuple(_warn(fits, i, best.beyond_support, best.skew)) for i in range(len(fits.gauge_ids))
+        ),
+    )
 
 
-def _warn(fits: RecordFits, i: int, beyond_support: NDArray[np.bool_]) -> Iterator[FitWarning]:
+def _warn(
+    fits: RecordFits, i: int, beyond_support: NDArray[np.bool_], best_skew: FloatArray
+) -> Iterator[FitWarning]:
     """What a reader of one gauge's results should know."""
     low, station = fits.low_floods, fits.station
     if fits.refusal[i]:
@@ -192,6 +202,15 @@ def _warn(fits: RecordFits, i: int, beyond_support: NDArray[np.bool_]) -> Iterat
     if beyond_support[i]:
         yield FitWarning(
             "peak_beyond_bound", "an exactly known peak lies beyond the bound of the fitted distribution"
+        )
+    is_weighted = fits.generalized_skew is not None and np.isfinite(fits.generalized_skew[i])
+    fewest = TESTED_YEARS_WEIGHTED if is_weighted else TESTED_YEARS_STATION
+    used = best_skew[i]
+    if n < fewest or not TESTED_SKEWS[0] <= used <= TESTED_SKEWS[1]:
+        yield FitWarning(
+            "limits_untested",
+            f"confidence limits were tested from {fewest} peaks and for skews of {TESTED_SKEWS[0]:g} to "
+            f"{TESTED_SKEWS[1]:g}; here {n} peaks and a skew of {used:.2f}",
         )
     if fits.generalized_skew is not None:
         generalized = fits.generalized_skew[i]
