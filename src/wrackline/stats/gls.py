@@ -75,7 +75,7 @@ def fit_trials(system: SpectralSystem, variances: FloatArray) -> TrialFits:
     products = (system.design[:, :, None] * system.design[:, None, :]).reshape(n, k * k)
     information = (weight @ products).reshape(-1, k, k)
     right = weight @ (system.design * system.y[:, None])
-    coefficients: FloatArray = np.linalg.solve(information, right[:, :, None])[:, :, 0]
+    coefficients = np.asarray(np.linalg.solve(information, right[:, :, None])[:, :, 0], dtype=float)
     residuals = system.y - coefficients @ system.design.T
     return TrialFits(
         coefficients=coefficients,

@@ -86,6 +86,9 @@ class Attribute(_Part):
     )
     lower: float | None = Field(None, description="Smallest physically possible value.")
     upper: float | None = Field(None, description="Largest physically possible value.")
+    sign: Literal["any", "positive", "negative"] = Field(
+        "any", description="Which way floods go with it for physical reasons; a regression of the other sign is not chosen."
+    )
     source: str = Field("", description="Where the values come from.")
     date: str = Field("", description="When they were made.")
 
@@ -265,9 +268,39 @@ class IndexFlood(_Part):
 
     statistic: Literal["median", "mean"] = Field("median", description="Sample statistic that scales the growth curve.")
     attributes: tuple[str, ...] = Field(
-        ("area",), description="Attributes in the regression, by name; `area` is taken as log10."
+        (), description="Attributes in the regression, by name; `area` is taken as log10. None named: those of `regression`."
     )
     by_region: bool = Field(False, description="Give every region its own intercept.")
+
+
+class AdoptedRoute(_Part):
+    """A route that the analyst adopts at one target, or at all."""
+
+    route: Literal["growth_curve", "quantile_regression", "routes_combined", "stream_transfer"] = Field(
+        description="The route adopted for all probabilities."
+    )
+    target_id: str = Field("", description="The target; blank: every target.")
+    why: str = Field(min_length=3, description="The written reason; printed in the report.")
+
+
+class Regression(_Part):
+    """Regression of flood quantiles on catchment attributes, and which route the study adopts."""
+
+    attributes: tuple[str, ...] = Field(
+        (), description="Attributes in the equations, by name; `area` is taken as log10. None named: the best subset, which the report asks you to name here."
+    )
+    largest_subset: int = Field(4, ge=1, le=8, description="Attributes in a subset that is tried, at most.")
+    regions: Literal["one", "intercepts", "separate"] = Field(
+        "one", description="`one` equation; own `intercepts` for every region; or `separate` coefficients for every region."
+    )
+    model_variance: Literal["reml", "moments", "bayes"] = Field(
+        "reml", description="How the model-error variance is estimated."
+    )
+    largest_inflation: float = Field(5.0, gt=1, description="Variance inflation above which a subset is not chosen.")
+    transfer_area_ratio: tuple[float, float] = Field(
+        (0.5, 1.5), description="Target area over gauge area within which a gauge on the same stream informs the target."
+    )
+    adopt: tuple[AdoptedRoute, ...] = Field((), description="Routes that the analyst adopts, with reasons; otherwise the evidence decides.")
 
 
 class StudyConfig(_Part):
@@ -293,12 +326,14 @@ class StudyConfig(_Part):
     skew: Skew = Field(default_factory=Skew, description=Skew.__doc__ or "")
     pooling: Pooling = Field(default_factory=Pooling, description=Pooling.__doc__ or "")
     index_flood: IndexFlood = Field(default_factory=IndexFlood, description=IndexFlood.__doc__ or "")
+    regression: Regression = Field(default_factory=Regression, description=Regression.__doc__ or "")
 
     @model_validator(mode="after")
     def _attributes_exist(self) -> StudyConfig:
-        unknown = [name for name in self.index_flood.attributes if name != "area" and name not in self.attributes]
-        if unknown:
-            raise ValueError(f"index_flood.attributes names {unknown}, which `attributes` does not declare")
+        for part, names in (("index_flood", self.index_flood.attributes), ("regression", self.regression.attributes)):
+            unknown = [name for name in names if name != "area" and name not in self.attributes]
+            if unknown:
+                raise ValueError(f"{part}.attributes names {unknown}, which `attributes` does not declare")
         unknown = [name for name in self.skew.attributes if name != "area" and name not in self.attributes]
         if unknown:
             raise ValueError(f"skew.regressions names {unknown}, which `attributes` does not declare")
