@@ -1,4 +1,4 @@
-"""The command line: ``wrackline check``, ``wrackline new``, ``wrackline fit``."""
+"""The command line: ``wrackline check``, ``new``, ``import``, ``fit``."""
 
 from __future__ import annotations
 
@@ -13,6 +13,7 @@ from rich.console import Console
 from rich.text import Text
 
 from wrackline.fit_command import fit
+from wrackline.import_command import import_files
 from wrackline.study.faults import Fault, StudyFaults
 from wrackline.study.loading import UnreadableStudy
 
@@ -73,6 +74,7 @@ def new(folder: Annotated[Path, typer.Argument(metavar="FOLDER", help="The folde
 
 
 app.command()(fit)
+app.command("import")(import_files)
 
 
 def print_faults(
