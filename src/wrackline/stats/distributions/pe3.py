@@ -122,17 +122,24 @@ def _nearly_normal_factor(p: FloatArray, skew: FloatArray) -> FloatArray:
     z = np.asarray(ndtri(p))
     inside = np.isfinite(z)
     small = np.where(np.abs(skew) < _NEARLY_NORMAL, skew, 0.0)
+    if not small.any():
+        return z
     return np.where(inside, _cornish_fisher(np.where(inside, z, 0.0), small)[0], z)
 
 
 def _nearly_normal_score(factor: FloatArray, skew: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Return the normal score of a frequency factor and the slope of the factor in it."""
     factor = np.clip(factor, -_FARTHEST_SCORE, _FARTHEST_SCORE)
+    # Elsewhere the score is the factor (normal) or is not used (far from normal).
+    near = (skew != 0) & (np.abs(skew) < _NEARLY_NORMAL)
+    scores, slopes = np.array(factor), np.ones(np.shape(factor))
+    factor, skew = factor[near], skew[near]
     z = factor - skew * (factor**2 - 1) / 6
     for _ in range(6):
         value, slope = _cornish_fisher(z, skew)
         z = z - (value - factor) / slope
-    return z, _cornish_fisher(z, skew)[1]
+    scores[near], slopes[near] = z, _cornish_fisher(z, skew)[1]
+    return scores, slopes
 
 
 def _cornish_fisher(z: FloatArray, skew: FloatArray) -> tuple[FloatArray, FloatArray]:

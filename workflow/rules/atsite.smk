@@ -1,0 +1,19 @@
+# Floods at gauges: every record fitted by itself, and what to check about the fit.
+rule atsite:
+    input:
+        records="work/intake/records.csv",
+        gauges="work/intake/gauges.csv",
+        ledger="work/intake/ledger.csv",
+        used="work/screen/gauges.csv",
+    output:
+        contribution="work/atsite/contribution.json",
+        moments="work/atsite/moments.csv",
+    log:
+        "work/logs/atsite.log",
+    conda:
+        "../envs/python.yaml"
+    params:
+        settings=settings(CONFIG, "at_site", "aeps", "confidence", "units", "seed"),
+        sources=source_digest("atsite"),
+    shell:
+        stage_call("atsite")
