@@ -28,14 +28,23 @@ import numpy as np
 
 sys.path.insert(0, str(Path(__file__).parents[2]))
 
+from example_region.region import generate_region
+from wrackline.hydrology.at_site import fit_records
+from wrackline.hydrology.dependence import fit_dependence
+from wrackline.hydrology.distances import great_circle_km
 from wrackline.hydrology.generalized_skew import fit_skew_model, prepare_station_skews
+from wrackline.hydrology.index_flood import count_common_years
+from wrackline.hydrology.skew_candidates import Stations, compare_candidates, plan_candidates
 from wrackline.hydrology.skew_diagnostics import diagnose_skew_model
-from wrackline.stats.gls import estimate_model_variance, turn_system
+from wrackline.hydrology.station_skews import measure_skew_records
+from wrackline.stats.gls import estimate_model_variance
 from wrackline.stats.pearson3 import frequency_factor
 from wrackline.stats.streams import random_stream
 
 Z90 = 1.6448536269514722
 SITES, SIDE_KM, NEAR = 60, 400.0, 0.95
+REGION_ATTRIBUTES = ("precipitation", "elevation", "slope", "forest", "baseflow_index")
+LOGARITHMIC = ("area_km2", "precipitation", "slope")
 
 
 @dataclass(frozen=True)
@@ -80,17 +89,15 @@ def simulate_set(job: tuple[int, Setting]) -> np.ndarray:
     stations = prepare_station_skews(station, years, design, correlation, np.minimum(years[:, None], years))
     model = fit_skew_model(stations, design)
     found = diagnose_skew_model(model, model)
-    full = turn_system(stations.skew, design, stations.covariance)
-    diagonal = turn_system(stations.skew, design, stations.variance)
     b, se = model.coefficients[0], np.sqrt(model.coefficient_covariance[0, 0])
     se_weighted = (1 / (model.model_variance_weighted + stations.variance)).sum() ** -0.5
     return np.array(
         [
             correlation[~np.eye(SITES, dtype=bool)].mean(),
             model.model_variance,
-            estimate_model_variance(full, "moments"),
-            estimate_model_variance(diagonal, "moments"),
-            estimate_model_variance(full, "reml"),
+            estimate_model_variance(stations.skew, design, stations.covariance, "moments"),
+            estimate_model_variance(stations.skew, design, stations.variance, "moments"),
+            estimate_model_variance(stations.skew, design, stations.covariance, "reml"),
             b,
             se**2,
             abs(b - setting.mean) < Z90 * se,
@@ -133,8 +140,97 @@ def run_station_sets(pool: ProcessPoolExecutor, replicates: int) -> None:
             print(f"  {'kept  ' if kept else 'MISSED'} {name}")
 
 
+@dataclass(frozen=True)
+class RegionTrial:
+    """Ungauged sites of one region: true skews, estimates and mean square errors; and the model chosen."""
+
+    truth: np.ndarray
+    estimate: np.ndarray
+    mse: np.ndarray
+    model: str
+
+
+def run_region(seed: int, minimum_years: float = 25.0) -> RegionTrial:
+    """Draw a region, choose a skew model by the rule and predict the skews of its ungauged sites."""
+    region = generate_region(seed, "lp3", awkward=False)
+    gauges, targets = region.gauges, region.targets
+    place = [gauges[f"centroid_{axis}"].to_numpy() for axis in ("latitude", "longitude")]
+    dependence = fit_dependence(region.records, *place).model
+    fits = fit_records(region.records, aeps=[0.5])
+    moments = fits.station.moments
+    measured = measure_skew_records(
+        region.records, fits.low_floods.threshold, moments.mean, moments.sd, moments.skew
+    )
+    serve = np.flatnonzero(measured.record_length >= minimum_years)
+    latitude, longitude = (axis[serve] for axis in place)
+    distance = great_circle_km(latitude[:, None], longitude[:, None], latitude, longitude)
+    names = ("area_km2", *REGION_ATTRIBUTES)
+    regions = tuple(sorted(set(gauges["region"])))
+    stations = Stations(
+        skew=moments.skew[serve],
+        record_length=measured.record_length[serve],
+        correlation=dependence.correlation(distance),
+        common_years=count_common_years(region.records)[np.ix_(serve, serve)],
+        distance_km=distance,
+        attributes={name: gauges[name].to_numpy()[serve] for name in names},
+        regions=regions,
+        shares=shares_of(gauges["region"].to_numpy()[serve], regions),
+    )
+    transforms = {name: "log10" if name in LOGARITHMIC else "none" for name in names}
+    plans, refused = plan_candidates(stations, [(name,) for name in names], transforms)
+    chosen = compare_candidates(stations, plans, refused).chosen
+    design = chosen.plan.design(
+        {name: targets[name].to_numpy() for name in names},
+        shares_of(targets["region"].to_numpy(), regions),
+        regions,
+    )
+    to_gauges = great_circle_km(
+        targets["centroid_latitude"].to_numpy()[:, None],
+        targets["centroid_longitude"].to_numpy()[:, None],
+        latitude,
+        longitude,
+    )
+    estimate, mse = chosen.predict(design, to_gauges)
+    return RegionTrial(region.parents.skew_log10[len(gauges) :], estimate, mse, chosen.plan.name)
+
+
+def shares_of(membership: np.ndarray, regions: tuple[str, ...]) -> np.ndarray:
+    return np.array([[name == known for known in regions] for name in membership], dtype=float)
+
+
+def run_regions(pool: ProcessPoolExecutor, seeds: range) -> None:
+    trials = list(pool.map(run_region, seeds))
+    error = [t.estimate - t.truth for t in trials]
+    reach = [Z90 * np.sqrt(t.mse) for t in trials]
+    inside = [np.abs(e) <= r for e, r in zip(error, reach, strict=True)]
+    every = np.concatenate(error)
+    oracle = Z90 * np.sqrt(np.mean(every**2))
+    ratio = mean_score(every, np.concatenate(reach)) / mean_score(every, np.full(len(every), oracle))
+    share = np.concatenate(inside).mean()
+    by_region = np.array([i.mean() for i in inside])
+    models = sorted({t.model for t in trials})
+    print(f"\n{len(trials)} regions, {len(every)} ungauged sites")
+    print("  models chosen: " + ", ".join(f"{m} {sum(t.model == m for t in trials)}" for m in models))
+    print(
+        f"  true skew within 1.645 root mean square errors {share:.3f} (standard error {by_region.std(ddof=1) / np.sqrt(len(trials)):.3f})"
+    )
+    print(
+        f"  root mean square of actual errors {np.sqrt(np.mean(every**2)):.3f}, of stated ones {np.sqrt(np.mean(np.concatenate(reach) ** 2)) / Z90:.3f}"
+    )
+    print(f"  mean error {every.mean():+.3f}; interval score over the oracle's {ratio:.3f}")
+    for name, kept in {"85 to 95 % inside": 0.85 <= share <= 0.95, "score at most 1.2": ratio <= 1.2}.items():
+        print(f"  {'kept  ' if kept else 'MISSED'} {name}")
+
+
+def mean_score(error: np.ndarray, reach: np.ndarray) -> float:
+    """Mean interval score of 90 % intervals (Gneiting and Raftery, 2007) of half-width ``reach``."""
+    return float(np.mean(2 * reach + 2 / 0.10 * np.maximum(np.abs(error) - reach, 0)))
+
+
 def main() -> None:
-    parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
+    parser = argparse.ArgumentParser(
+        description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter
+    )
     parser.add_argument("--g3", action="store_true", help="simulated station sets")
     parser.add_argument("--replicates", type=int, default=1000, help="station sets of each kind")
     parser.add_argument("--regions", type=int, default=0, help="regenerated regions")
@@ -144,6 +240,8 @@ def main() -> None:
     with ProcessPoolExecutor(arguments.cores) as pool:
         if arguments.g3:
             run_station_sets(pool, arguments.replicates)
+        if arguments.regions:
+            run_regions(pool, range(arguments.first_seed, arguments.first_seed + arguments.regions))
 
 
 if __name__ == "__main__":

@@ -62,7 +62,7 @@ class SkewModel:
     leave_one_out, leave_one_out_variance : (n,)
         Generalized skew at every site from the model without it, and its variance of prediction.
     leave_one_out_log_density : (n,)
-        Of every station skew under the model without it.
+        Of every station skew given the others, model and sampling errors known; see `score_left_out`.
     """
 
     stations: StationSkews
@@ -172,7 +172,9 @@ def fit_skew_model(
     own = np.diag(hat)
     # A site that alone carries a coefficient (leverage 1) cannot be left out: its leave-one-out values are NaN.
     with np.errstate(divide="ignore", invalid="ignore"):
-        without_own = np.where((own < 1.0 - 1e-10)[:, None], (hat - np.diag(own)) / (1.0 - own)[:, None], np.nan)
+        without_own = np.where(
+            (own < 1.0 - 1e-10)[:, None], (hat - np.diag(own)) / (1.0 - own)[:, None], np.nan
+        )
     loo = without_own @ stations.skew
     loo_variance = posterior.mean + np.einsum("ij,ij->i", without_own @ cover, without_own)
     return SkewModel(
@@ -189,32 +191,33 @@ def fit_skew_model(
         residuals=stations.skew - fitted,
         leave_one_out=loo,
         leave_one_out_variance=loo_variance,
-        leave_one_out_log_density=score_left_out(stations, loo, loo_variance, without_own),
+        leave_one_out_log_density=score_left_out(stations.skew, design, np.linalg.inv(cover)),
     )
 
 
-def score_left_out(
-    stations: StationSkews, predicted: FloatArray, variance: FloatArray, weights: FloatArray
-) -> FloatArray:
-    """Return the log density (n,) of every station skew under the normal prediction from the other stations.
+def score_left_out(skew: FloatArray, design: FloatArray, precision: FloatArray) -> FloatArray:
+    """Return the log density (n,) of every station skew given all the other station skews.
 
     Parameters
     ----------
-    stations : StationSkews of n sites
-    predicted, variance : (n,)
-        Of the true skew at every station from the others.
-    weights : (n, n)
-        ``predicted = weights @ skew``, with a zero diagonal.
+    skew : (n,)
+    design : (n, k)
+    precision : (n, n)
+        Inverse covariance of the station skews about the model: model errors and sampling errors.
 
     Notes
     -----
-    A station skew errs about the true one by its sampling variance; neighbours share part of that error, which
-    is taken off twice, for the others' errors are in the prediction.
+    With ``K = P - P X (X'P X)^-1 X'P`` the prediction of skew i errs by ``(K y)_i / K_ii`` with variance
+    ``1 / K_ii``, the coefficients under a flat prior. Neighbours also tell of the sampling error that a station shares with
+    them. To predict a station skew only through the model would credit a model that follows neighbours with
+    that shared error, as if it were skew of the region: a constant for each part of a homogeneous region then seems to win.
     """
-    shared = np.einsum("ij,ij->i", weights, stations.covariance)
-    spread_of_difference = variance + stations.variance - 2.0 * shared
-    difference = stations.skew - predicted
-    return -0.5 * (np.log(2 * np.pi * spread_of_difference) + difference**2 / spread_of_difference)
+    weighted = precision @ design
+    core = precision - weighted @ np.linalg.solve(design.T @ weighted, weighted.T)
+    own = np.diag(core)
+    # A station that alone carries a coefficient is not predicted by the others: no density.
+    own = np.where(own > 1e-10 * np.diag(precision), own, np.nan)
+    return 0.5 * (np.log(own / (2 * np.pi)) - (core @ skew) ** 2 / own)
 
 
 def generalized_skew_error_covariance(model: SkewModel, design: FloatArray) -> FloatArray:

@@ -33,7 +33,7 @@ class SkewSurface:
     leave_one_out, leave_one_out_variance : (n,)
         Skew at every station from the surface without it, and its variance of prediction.
     leave_one_out_log_density : (n,)
-        Of every station skew under the surface without it.
+        Of every station skew given the others; see `score_left_out`.
     """
 
     stations: StationSkews
@@ -120,6 +120,19 @@ def fit_skew_surface(
     return _surface_at(stations, design, distance_km, variance, range_km, evidence)
 
 
+def surface_evidence(
+    stations: StationSkews, design: FloatArray, distance_km: FloatArray, prior_rate: float = 10.0
+) -> float:
+    """Return the log evidence of a surface over that of uncorrelated model errors, averaged over the ranges."""
+    root = np.linalg.cholesky(stations.covariance)
+    y, x = np.linalg.solve(root, stations.skew), np.linalg.solve(root, design)
+    found = [
+        _evidence(root, y, x, spatial_correlation(distance_km, range_km), prior_rate)[0]
+        for range_km in (0.0, *(np.array(RANGE_SHARES) * distance_km.max()))
+    ]
+    return float(np.logaddexp.reduce(found[1:]) - np.log(len(RANGE_SHARES)) - found[0])
+
+
 def _evidence(
     root: FloatArray, y: FloatArray, x: FloatArray, correlation: FloatArray, prior_rate: float
 ) -> tuple[float, float]:
@@ -155,7 +168,7 @@ def _surface_at(
     precision = np.linalg.inv(shared + stations.covariance)
     covariance = np.linalg.inv(design.T @ precision @ design)
     coefficients = covariance @ (design.T @ (precision @ stations.skew))
-    mean, spread, weights = _leave_one_out(stations.skew, design, shared, precision, variance)
+    mean, spread = _leave_one_out(stations.skew, design, shared, precision, variance)
     return SkewSurface(
         stations=stations,
         design=design,
@@ -168,16 +181,14 @@ def _surface_at(
         residuals=stations.skew - design @ coefficients,
         leave_one_out=mean,
         leave_one_out_variance=spread,
-        leave_one_out_log_density=score_left_out(stations, mean, spread, weights),
+        leave_one_out_log_density=score_left_out(stations.skew, design, precision),
     )
 
 
 def _leave_one_out(
     y: FloatArray, design: FloatArray, shared: FloatArray, precision: FloatArray, variance: float
-) -> tuple[FloatArray, FloatArray, FloatArray]:
+) -> tuple[FloatArray, FloatArray]:
     """Predict the true skew at every station from the others, at fixed variance and range.
-
-    Returns predictions, their variances, and the weights (n, n) of the station skews in them.
 
     Without station i the precision is ``K - k k' / K_ii`` on the others (block inversion), so all stations
     follow from products of whole matrices.
@@ -186,16 +197,15 @@ def _leave_one_out(
     near = shared - np.diag(np.diag(shared))
     pull = near @ precision
     self_pull = np.diag(pull)
-    weighted_x = precision @ design
+    weighted_x, weighted_y = precision @ design, precision @ y
 
-    outer_pull = pull - (self_pull / own)[:, None] * precision
+    pull_y = pull @ y - self_pull * weighted_y / own
     pull_x = pull @ design - (self_pull / own)[:, None] * weighted_x
     pull_near = np.einsum("ij,ij->i", pull, near) - self_pull**2 / own
     information = design.T @ weighted_x - weighted_x[:, :, None] * weighted_x[:, None, :] / own[:, None, None]
+    right = design.T @ weighted_y - weighted_x * (weighted_y / own)[:, None]
+    b = np.linalg.solve(information, right[:, :, None])[:, :, 0]
     rest = design - pull_x
-    load = np.linalg.solve(information, rest[:, :, None])[:, :, 0]
-    own_share = np.einsum("ik,ik->i", load, weighted_x) / own
-    weights = outer_pull + load @ weighted_x.T - own_share[:, None] * precision
-    np.fill_diagonal(weights, 0.0)
-    grown = np.einsum("ik,ik->i", rest, load)
-    return weights @ y, variance - pull_near + grown, weights
+    mean = np.einsum("ik,ik->i", rest, b) + pull_y
+    grown = np.einsum("ik,ik->i", rest, np.linalg.solve(information, rest[:, :, None])[:, :, 0])
+    return mean, variance - pull_near + grown

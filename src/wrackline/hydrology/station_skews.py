@@ -3,19 +3,18 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 
 from wrackline.hydrology.at_site import describe_observation
 from wrackline.hydrology.low_floods import set_apart_low_floods
 from wrackline.hydrology.records import BoolArray, FloatArray, IntArray, PeakRecords
-from wrackline.stats.moment_covariance import ThresholdClasses, complete_skew_variance, moment_covariance
-from wrackline.stats.pearson3 import cdf, frequency_factor
-from wrackline.stats.skew_variance import griffis_stedinger_variance
+from wrackline.stats.moment_covariance import complete_skew_variance, moment_covariance
+from wrackline.stats.skew_variance import station_skew_mse
 
 FEWEST_YEARS = 10
-"""Shortest record for which the polynomial of the skew's variance holds."""
+"""Shortest record for which the polynomial of the variance of a skew holds."""
 FEWEST_OF_A_CAUSE = 10
 """Peaks of one cause that a skew is computed from."""
 
@@ -26,21 +25,18 @@ class SkewRecords:
 
     Attributes
     ----------
-    regional_skew : float
-        Skew at which the mean square errors are taken, one for all gauges.
     systematic_years : int array
         Exactly known systematic peaks.
     historical_years : int array
         All years in the fit: systematic, historic and known by threshold.
     systematic_mse : float array
-        Mean square error of the skew of a complete record of the systematic peaks.
+        Mean square error that the station skew would have from a complete record of the systematic peaks.
     all_mse : float array
-        Of the whole record, with its censored and historic years.
+        That which it has from the whole record, with its censored and historic years.
     record_length : float array
         Pseudo record length, years.
     """
 
-    regional_skew: float
     systematic_years: IntArray
     historical_years: IntArray
     systematic_mse: FloatArray
@@ -69,10 +65,14 @@ def measure_skew_records(
     -----
     Pseudo record length (Veilleux, 2011): systematic peaks times the mean square error of the skew that they alone would
     give, over that of the whole record. Low floods may shorten it; historic knowledge can only lengthen it, up to all
-    years of the fit. Both errors are taken at one regional skew, the mean of the station skews weighted by
-    years, with every threshold at the same probability as under the station fit. At the stations' own skews they
-    would follow the sampling error of each skew (a record of zeros and low floods can then count for more years
-    than it has), and a weight must not depend on a station's own skew (Tasker and Stedinger, 1986).
+    years of the fit. Both errors are taken at one skew, that of the station fit, so that the two differ by what is
+    censored or added and not by the sampling error of a second skew; records with zeros, which have no
+    complete skew, get a length as well.
+
+    In 24 regenerated regions whose records hold no true low floods, the squared errors of the skews of 25 years or more
+    were 0.97 of their variances at these lengths (1.05 without a test for low floods); 0.93 with the two errors at
+    two skews; 0.84 with both at one regional skew, which also raised the regional skew by 0.02, because it takes most
+    years from records whose sample skew is low.
     """
     g = records.n_gauges
     fitted = set_apart_low_floods(records, low_flood_threshold)
@@ -82,63 +82,40 @@ def measure_skew_records(
     systematic_years = np.bincount(records.gauge_index[records.systematic_exact], minlength=g)
     historical_years = np.diff(fitted.offsets)
     usable = np.isfinite(skew) & np.isfinite(sd) & (historical_years > 0)
-    regional = float(np.average(skew[usable], weights=historical_years[usable])) if usable.any() else 0.0
-
-    systematic_mse = griffis_stedinger_variance(np.maximum(systematic_years, FEWEST_YEARS), regional)
-    all_mse = _skew_mse(fitted, mean, sd, skew, regional, usable)
+    systematic_mse = np.full(g, np.nan)
+    systematic_mse[usable] = station_skew_mse(
+        np.maximum(systematic_years, FEWEST_YEARS)[usable], skew[usable]
+    )
+    all_mse = _skew_mse(fitted, mean, sd, skew, usable)
     length = systematic_years * systematic_mse / all_mse
     has_history = np.bincount(fitted.gauge_index[fitted.historic | ~fitted.observed], minlength=g) > 0
     if has_history.any():
         alone = fitted.keep_rows(fitted.observed & ~fitted.historic)
-        alone_mse = _skew_mse(alone, mean, sd, skew, regional, usable & has_history)
+        alone_mse = _skew_mse(alone, mean, sd, skew, usable & has_history)
         length = np.fmax(length, systematic_years * systematic_mse / alone_mse)
     return SkewRecords(
-        regional_skew=regional,
         systematic_years=systematic_years,
         historical_years=historical_years,
-        systematic_mse=np.where(usable, systematic_mse, np.nan),
+        systematic_mse=systematic_mse,
         all_mse=all_mse,
         record_length=np.where(usable, np.minimum(length, historical_years), np.nan),
     )
 
 
 def _skew_mse(
-    fitted: PeakRecords,
-    mean: FloatArray,
-    sd: FloatArray,
-    skew: FloatArray,
-    regional: float,
-    usable: BoolArray,
+    fitted: PeakRecords, mean: FloatArray, sd: FloatArray, skew: FloatArray, usable: BoolArray
 ) -> FloatArray:
-    """Mean square error of the station skew (g,) at the regional skew, low floods set apart; NaN where not usable."""
+    """Mean square error of the station skew (g,), low floods set apart; NaN where not usable."""
     years = np.diff(fitted.offsets)
     gauges = np.flatnonzero(usable & (years > 0))
     _, classes = describe_observation(fitted)
-    at_regional = _move_thresholds(classes.keep_gauges(gauges), mean[gauges], sd[gauges], skew[gauges], regional)
-    ones, same = np.ones(len(gauges)), np.full(len(gauges), regional)
-    covariance = moment_covariance(at_regional, 0.0 * ones, ones, same)
-    ratio = covariance[:, 2, 2] / complete_skew_variance(years[gauges], same)
+    covariance = moment_covariance(classes.keep_gauges(gauges), mean[gauges], sd[gauges], skew[gauges])
+    ratio = covariance[:, 2, 2] / complete_skew_variance(years[gauges], skew[gauges])
     mse = np.full(len(years), np.nan)
     # No censoring can add to what a complete record says: a ratio below one is an artefact of first-order theory.
-    mse[gauges] = griffis_stedinger_variance(np.maximum(years[gauges], FEWEST_YEARS), regional) * np.maximum(ratio, 1.0)
+    complete = station_skew_mse(np.maximum(years[gauges], FEWEST_YEARS), skew[gauges])
+    mse[gauges] = complete * np.maximum(ratio, 1.0)
     return mse
-
-
-def _move_thresholds(
-    classes: ThresholdClasses, mean: FloatArray, sd: FloatArray, skew: FloatArray, regional: float
-) -> ThresholdClasses:
-    """Return thresholds in a standardised distribution with the regional skew, at unchanged probability."""
-    moved = {}
-    for name in ("low", "high"):
-        level = getattr(classes, name)
-        finite = np.isfinite(level)
-        own = classes.gauge[finite]
-        below = cdf((level[finite] - mean[own]) / sd[own], skew[own])
-        aep = np.clip(1.0 - below, 1e-9, 1.0 - 1e-9)
-        level = level.copy()
-        level[finite] = frequency_factor(aep, np.full(len(aep), regional))
-        moved[name] = level
-    return replace(classes, **moved)
 
 
 def tell_who_serves(
@@ -166,7 +143,9 @@ def tell_who_serves(
     for i, used_here in enumerate(used):
         barred = [flag for flag in flags[i].split() if flag in exclude]
         if not used_here:
-            told.append(f"not used by the screening: {reasons[i]}" if reasons[i] else "not used by the screening")
+            told.append(
+                f"not used by the screening: {reasons[i]}" if reasons[i] else "not used by the screening"
+            )
         elif barred:
             told.append(f"flagged by the screening: {', '.join(barred).replace('_', ' ')}")
         elif not np.isfinite(measured.record_length[i]):
