@@ -84,6 +84,6 @@ def _tell_blanks(frame: pd.DataFrame, area_unit: str, log: FaultLog) -> None:
                 "to_fill_in",
                 "gauges.csv",
                 f"Blank for {len(lacking)} of {len(frame)} gauges: {few}.",
-                f"Fill in {what.format(area_unit)}, or import again together with a site list that has it.",
+                f"Fill in {what.format(area_unit)}; a site list given beside the peaks would tell it where it has the column.",
                 column=column,
             )

@@ -118,8 +118,6 @@ def import_peaks(
         "thresholds.csv": _thresholds_table(resolved.kept),
         "gauges.csv": gauges,
     }
-    if not findings.peaks:
-        del tables["peaks.csv"], tables["thresholds.csv"]
     to_write = _without_full_tables(folder, tables, config, log)
     if any(fault.code in UNREADABLE for fault in log.problems):
         raise UnreadableStudy(log.problems, log.warnings)
@@ -188,20 +186,22 @@ def _without_full_tables(
     folder: Path, tables: dict[str, pd.DataFrame], config: StudyConfig | None, log: FaultLog
 ) -> dict[str, pd.DataFrame]:
     """Return the tables to write: peaks and thresholds are never overwritten, filled gauges stay as they are."""
-    for role, named in (("peaks", config.inputs.peaks), ("gauges", config.inputs.gauges)) if config else ():
-        if named != f"{role}.csv" and f"{role}.csv" in tables:
+    for name, table in tables.items():
+        role = name.removesuffix(".csv")
+        named = getattr(config.inputs, role) if config else name
+        if named != name and len(table):
             log.warning(
                 "other_name",
                 "study.yaml",
-                f"The study reads {named or 'no file'}; the import writes {role}.csv.",
-                f"Write `{role}: {role}.csv` under `inputs`, or join the two tables.",
+                f"The study reads {named or 'no file'}; the import writes {name}.",
+                f"Write `{role}: {name}` under `inputs`, or join the two tables.",
                 column=f"inputs.{role}",
             )
     out = {}
     for name, table in tables.items():
         if not _has_rows(folder / name):
             out[name] = table
-        elif name == "gauges.csv" and "peaks.csv" in tables:
+        elif name == "gauges.csv" and len(tables["peaks.csv"]):
             log.warning(
                 "kept_as_it_is",
                 name,

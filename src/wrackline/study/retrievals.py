@@ -10,6 +10,7 @@ from wrackline.study.faults import FaultLog
 from wrackline.study.import_findings import Findings, FoundPeak, FoundSite, is_flow, is_identifier
 from wrackline.study.peaks import water_years_of
 from wrackline.study.retrieval_codes import read_codes
+from wrackline.study.vocabulary import EARLIEST_YEAR, LATEST_YEAR
 
 _WIDTH = re.compile(r"[0-9]*[sdnSDN]?")
 _DATE = re.compile(r"([0-9]{4})(?:-([0-9]{2})(?:-([0-9]{2}))?)?")
@@ -232,7 +233,7 @@ def _date(line: Line, log: FaultLog) -> str | None:
     if match:
         year, month, day = match[1], match[2] or "00", match[3] or "00"
         known = year if month == "00" else f"{year}-{month}" if day == "00" else f"{year}-{month}-{day}"
-        if 1000 <= int(year) <= 2200 and water_years_of(known, 10) is not None:
+        if EARLIEST_YEAR <= int(year) < LATEST_YEAR and water_years_of(known, 10) is not None:
             return known
     log.problem(
         "malformed_date",
