@@ -85,7 +85,7 @@ def fit_expected_lmoments(
     iterated = np.zeros(g, dtype=bool)
     iterated[own[hidden]] = True
     active = np.flatnonzero(usable)
-    for _ in range(most_iterations):
+    for _ in range(most_iterations if len(active) else 0):
         l1, l2, t3 = _lmoments_of(values, offsets, own, active)
         t3 = t3 if lskew is None else np.where(l2 > 0, lskew, np.nan)
         parameters[active] = law.fit(l1, l2, t3)

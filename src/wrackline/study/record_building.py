@@ -86,7 +86,7 @@ def build_records(
     )
     unused_years = period_years[~periods.use[period_of]]
     records = _assemble(gauge_ids, peaks, verdicts, (perception_low, perception_high), years, unused_years)
-    _tell_other_effects(ledger, effects)
+    _tell_other_effects(ledger, effects, config)
     return BuiltRecords(
         records,
         _accounting(gauge_ids, peaks, verdicts),
@@ -308,7 +308,7 @@ def _accounting(gauge_ids: list[str], peaks: Peaks, verdicts: _Verdicts) -> pd.D
     )
 
 
-def _tell_other_effects(ledger: Ledger, effects: list[str]) -> None:
+def _tell_other_effects(ledger: Ledger, effects: list[str], config: StudyConfig) -> None:
     for line, later in enumerate(ledger.superseded_by):
         action, subject, gauge, value = (
             ledger.frame[c].iloc[line] for c in ("action", "subject", "gauge_id", "value")
