@@ -13,6 +13,7 @@ from wrackline.hydrology.goodness_of_fit import Agreement
 from wrackline.hydrology.plotting_positions import plot_positions
 from wrackline.hydrology.record_fits import RecordFits
 from wrackline.hydrology.records import BoolArray, FloatArray, PeakRecords
+from wrackline.stats.skew_variance import station_skew_mse
 from wrackline.study.tables import Column, Table
 
 NO_REGION = "(none)"
@@ -172,7 +173,8 @@ def exact_moments(results: GaugeResults, systematic: RecordFits) -> pd.DataFrame
     """Return what later stages need with every digit, m3/s and base-10 logarithms.
 
     The pseudo record length is that of Veilleux (2011): systematic peaks times the ratio of the skew's mean square error
-    from the systematic record alone over that from all data, at most the years in the fit.
+    from the systematic record alone over that from all data, at most the years in the fit. Where low floods put the
+    skew of the whole systematic record out of range, a complete record with the station skew stands for it.
     """
     fits, station = results.fits, results.fits.station
     moments = station.moments
@@ -196,8 +198,12 @@ def exact_moments(results: GaugeResults, systematic: RecordFits) -> pd.DataFrame
     frame["historic_period_years"] = np.maximum(fits.record_years - systematic.record_years, 0)
     frame["systematic_skew"] = systematic.station.moments.skew
     frame["systematic_skew_mse"] = systematic.station.station_skew_mse
+    complete = station_skew_mse(np.maximum(systematic.n_peaks, 3), moments.skew)
+    own = np.where(
+        np.isnan(systematic.station.station_skew_mse), complete, systematic.station.station_skew_mse
+    )
     with np.errstate(invalid="ignore", divide="ignore"):
-        pseudo = systematic.n_peaks * systematic.station.station_skew_mse / station.station_skew_mse
+        pseudo = systematic.n_peaks * own / station.station_skew_mse
     frame["pseudo_record_length"] = np.minimum(pseudo, fits.record_years)
     numbers = frame.columns[frame.columns.get_loc("mean_log10") :]
     unfitted = ~results.fitted
