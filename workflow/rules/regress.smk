@@ -1,20 +1,31 @@
-# The index flood as a function of catchment attributes.
+# The index flood and the floods of every probability as functions of catchment attributes.
 rule regress:
     input:
         records="work/screen/records.csv",
         used="work/screen/gauges.csv",
         gauges="work/intake/gauges.csv",
+        targets="work/intake/targets.csv",
         dependence="work/dependence/model.json",
         growth="work/pool/growth.json",
     output:
         contribution="work/regress/contribution.json",
         equations="work/regress/tables/equations.json",
+        left_out="work/regress/left_out.csv",
     log:
         "work/logs/regress.log",
     conda:
         "../envs/python.yaml"
     params:
-        settings=settings(CONFIG, "index_flood", "attributes", "units", "confidence"),
+        settings=settings(
+            CONFIG,
+            "index_flood",
+            "regression",
+            "attributes",
+            "aeps",
+            "units",
+            "confidence",
+            "seed",
+        ),
         sources=source_digest("regress"),
     shell:
         stage_call("regress")

@@ -115,7 +115,9 @@ def choose_attributes(
         )
         for i in sorted({*shown, best})
     }
-    return AttributeChoice(tuple(fitted[i] for i in shown), fitted[best], len(ranking.members))
+    subsets = sorted((fitted[i] for i in shown), key=lambda subset: subset.prediction_variance)
+    sound = [subset for subset in subsets if not subset.objections]
+    return AttributeChoice(tuple(subsets), sound[0] if sound else fitted[best], len(ranking.members))
 
 
 def _fit_subset(

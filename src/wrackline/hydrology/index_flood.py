@@ -8,7 +8,7 @@ from typing import Literal
 import numpy as np
 
 from wrackline.hydrology.records import BoolArray, FloatArray, PeakRecords
-from wrackline.stats.gls import GlsFit, fit_gls
+from wrackline.stats.gls import GlsFit, Method, fit_gls
 
 LOG10_E = float(np.log10(np.e))
 
@@ -108,32 +108,12 @@ def count_common_years(records: PeakRecords) -> np.ndarray:
     return (present @ present.T).astype(float)
 
 
-@dataclass(frozen=True)
-class AttributeRanges:
-    """The attribute space that the gauges of a regression cover, to warn beyond it.
-
-    Attributes
-    ----------
-    names : length k - 1 or so
-        Attributes in the regression, as the study names them.
-    lower, upper : (len(names),)
-        Smallest and largest transformed value among the gauges.
-    largest_spread : float
-        Largest ``x (X' L^-1 X)^-1 x'`` among the gauges: the edge of their joint range.
-    """
-
-    names: tuple[str, ...]
-    lower: FloatArray
-    upper: FloatArray
-    largest_spread: float
-
-
 def fit_index_regression(
-    index: IndexFloods, design: FloatArray, sampling_covariance: FloatArray
+    index: IndexFloods, design: FloatArray, sampling_covariance: FloatArray, method: Method = "reml"
 ) -> tuple[GlsFit, BoolArray]:
     """Regress log10 index floods on the design's columns; returns the fit and the gauges it used (g,)."""
     used = index.usable & np.isfinite(design).all(axis=1)
     return (
-        fit_gls(np.log10(index.flow[used]), design[used], sampling_covariance[np.ix_(used, used)]),
+        fit_gls(np.log10(index.flow[used]), design[used], sampling_covariance[np.ix_(used, used)], method),
         used,
     )

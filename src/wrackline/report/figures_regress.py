@@ -13,6 +13,7 @@ from wrackline.study.config import StudyConfig
 
 def draw_regression(path: Path, table: pd.DataFrame, area: np.ndarray, config: StudyConfig) -> None:
     """Draw sample against regression, and residual against area (declared units), for the gauges in the fit."""
+    table, area = table[table["in_fit"]], area[table["in_fit"].to_numpy()]
     figure, (left, right) = new_figure(8.6, 4.1, ncols=2)
     reach = 10 ** (2 * table["se_log10"].to_numpy())
     sample, fitted = table["index_flood"].to_numpy(), table["regression"].to_numpy()
@@ -76,4 +77,26 @@ def draw_targets(path: Path, table: pd.DataFrame, aep: float, config: StudyConfi
     axes.tick_params(axis="y", length=0, labelcolor=INK)
     axes.legend(loc="lower right", labelcolor=INK)
     axes.spines["left"].set_color(MUTED)
+    save_figure(figure, path)
+
+
+def draw_quantile_residuals(path: Path, sites: pd.DataFrame, residuals: np.ndarray, aep: float) -> None:
+    """Draw residuals of one equation at the gauges' places, blue where the equation is too low."""
+    figure, axes = new_figure(6.4, 5.0)
+    reach = float(np.abs(residuals).max(initial=0.01))
+    order = np.argsort(np.abs(residuals), kind="stable")
+    shown = axes.scatter(
+        sites["longitude"].to_numpy()[order],
+        sites["latitude"].to_numpy()[order],
+        c=residuals[order],
+        s=20 + 120 * np.abs(residuals[order]) / reach,
+        cmap="RdBu",
+        vmin=-reach,
+        vmax=reach,
+        edgecolors=INK,
+        linewidths=0.6,
+    )
+    axes.set(xlabel="longitude, degrees", ylabel="latitude, degrees", title=f"AEP {aep:g}")
+    axes.set_aspect(1.0 / np.cos(np.radians(float(sites["latitude"].mean()))))
+    figure.colorbar(shown, ax=axes, label="residual, log10: flood over regression")
     save_figure(figure, path)

@@ -1,107 +1,142 @@
-"""Stage `regress`: the index flood as a function of catchment attributes."""
+"""Stage `regress`: the index flood, and the floods of every probability, as functions of catchment attributes."""
 
 from __future__ import annotations
 
 import json
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 import pandas as pd
 
-from wrackline.hydrology.attributes import DesignPlan
-from wrackline.hydrology.dependence import DistanceModel
-from wrackline.hydrology.distances import great_circle_km
+from wrackline.hydrology.attribute_choice import AttributeChoice, choose_attributes
+from wrackline.hydrology.attributes import DesignPlan, describe_space
 from wrackline.hydrology.index_flood import (
-    LOG10_E,
     IndexFloods,
-    count_common_years,
     fit_index_regression,
     index_sampling_covariance,
     sample_index_floods,
 )
+from wrackline.hydrology.quantile_covariance import QuantileErrorModel, quantile_sampling_covariance
+from wrackline.hydrology.quantile_regression import (
+    QuantileRegression,
+    RegionalSd,
+    build_error_model,
+    fit_quantile_regression,
+    fit_regional_sd,
+)
 from wrackline.hydrology.records import BoolArray, FloatArray
-from wrackline.report.figures_regress import draw_regression
-from wrackline.report.rounding import format_flow, format_percent
+from wrackline.hydrology.region_of_influence import InfluenceTrial, try_regions_of_influence
+from wrackline.hydrology.regional_equations import (
+    EquationDiagnostics,
+    diagnose_equation,
+    save_index_equation,
+    save_quantile_equations,
+)
+from wrackline.report.figures_regress import draw_quantile_residuals, draw_regression
+from wrackline.stages.gauge_floods import (
+    GaugeFloods,
+    UsedGauges,
+    read_gauge_floods,
+    read_used_gauges,
+)
+from wrackline.stages.regress_page import index_section, regress_warnings
+from wrackline.stages.regress_tables import (
+    index_table,
+    left_out_table,
+    regression_table,
+    subset_table,
+)
 from wrackline.stages.running import StudyFiles, main
 from wrackline.stats.gls import GlsFit
+from wrackline.stats.gls_leave_one_out import LeftOut, leave_one_out
+from wrackline.stats.streams import random_stream
 from wrackline.study.config import StudyConfig
-from wrackline.study.contribution import Contribution, Figure, PageTable, Section, write_contribution
-from wrackline.study.faults import Fault, FaultLog
-from wrackline.study.handover import read_records, read_sites
-from wrackline.study.tables import Column, Table
+from wrackline.study.contribution import Contribution, write_contribution
+from wrackline.study.faults import FaultLog
+from wrackline.study.handover import read_sites
+from wrackline.study.tables import write_table
 
-FIT_COLUMNS = (
-    Column("gauge_id", "text", "gauge"),
-    Column("n_peaks", "count", "exact systematic peaks behind the index flood"),
-    Column("index_flood", "flow", "sample index flood"),
-    Column(
-        "se_log10", "log10", "standard error of the log10 sample index flood, from the pool's growth curve"
-    ),
-    Column("regression", "flow", "index flood by the regression equation"),
-    Column("residual_log10", "log10", "log10 of sample over regression"),
-    Column("leverage", "", "weight of the gauge's own index flood in its regression estimate"),
-    Column("in_fit", "true/false", "whether the gauge is in the regression"),
-    Column("reason", "text", "why it is not"),
-)
+INFLUENCE_SIZES = (20, 30, 45, 60, 90)
+"""Gauges tried in a region of influence."""
+
+
+@dataclass(frozen=True)
+class IndexEquation:
+    """The index-flood regression and what surrounds it; g used gauges, n of them in the fit."""
+
+    index: IndexFloods
+    plan: DesignPlan
+    design: FloatArray
+    fit: GlsFit
+    in_fit: BoolArray
+    left_out: LeftOut
+    diagnostics: EquationDiagnostics
+
+
+@dataclass(frozen=True)
+class QuantileEquations:
+    """The quantile regressions and what surrounds them; g used gauges, n of them in the fit."""
+
+    floods: GaugeFloods
+    plan: DesignPlan
+    design: FloatArray
+    in_fit: BoolArray
+    sd: RegionalSd
+    errors: QuantileErrorModel
+    regression: QuantileRegression
+    diagnostics: tuple[EquationDiagnostics, ...]
+    influence: tuple[InfluenceTrial, ...]
 
 
 def run(study: StudyFiles) -> str:
-    """Fit the index-flood regression and write ``work/regress``."""
-    config = study.config
-    sites = read_sites(study.work("intake") / "gauges.csv")
-    screened = read_sites(study.work("screen") / "gauges.csv")
-    used_ids = screened.loc[screened["used"], "gauge_id"]
-    sites = sites[sites["gauge_id"].isin(used_ids)].reset_index(drop=True)
-    records = read_records(study.work("screen") / "records.csv", sites["gauge_id"].tolist())
+    """Fit all regressions and write ``work/regress``."""
+    config, faults = study.config, FaultLog()
+    gauges = read_used_gauges(study)
+    floods = read_gauge_floods(study, gauges)
     pools = json.loads((study.work("pool") / "growth.json").read_text(encoding="utf-8"))["pools"]
-    dependence = DistanceModel.from_dict(
-        json.loads((study.work("dependence") / "model.json").read_text(encoding="utf-8"))
-    )
+    targets = read_sites(study.work("intake") / "targets.csv")
+    region = pool_of_gauges(pools, gauges.gauge_ids)
 
-    region = pool_of_gauges(pools, sites["gauge_id"].tolist())
-    relative_sd = np.array([pools[name]["index_relative_sd"] if name else np.nan for name in region])
-    index = sample_index_floods(records, relative_sd, config.index_flood.statistic)
-    distance = great_circle_km(
-        *(sites[f"centroid_{axis}"].to_numpy()[:, None] for axis in ("latitude", "longitude")),
-        *(sites[f"centroid_{axis}"].to_numpy()[None, :] for axis in ("latitude", "longitude")),
-    )
-    covariance = index_sampling_covariance(
-        index.log10_variance,
-        count_common_years(records),
-        np.maximum(index.n, 1),
-        dependence.correlation(distance),
-        config.index_flood.statistic,
-    )
-    plan = plan_regression(config, sorted({name for name in region if name}))
-    design = plan.design(site_attributes(sites, plan), region)
-    faults = FaultLog()
-    if (index.usable & np.isfinite(design).all(axis=1)).sum() <= design.shape[1] + 1:
-        faults.problem(
-            "too_few_gauges_for_regression",
-            "regress",
-            f"the index-flood equation has {design.shape[1]} coefficients and too few gauges to fit them",
-            "Name fewer attributes in index_flood.attributes, or relax the screening.",
-        )
-        faults.stop_on_problems()
-    fit, in_fit = fit_index_regression(index, design, covariance)
+    choice = search_attributes(config, gauges, floods, targets, region, faults)
+    attributes = config.regression.attributes or (choice.best.attributes if choice else ("area",))
+    index = fit_index(config, gauges, pools, region, attributes, faults)
+    quantiles = fit_quantiles(config, gauges, floods, region, attributes, faults)
 
-    table = fit_table(config, sites, index, design, fit, in_fit, region)
-    model = describe_equation(config, plan, fit, plan.transformed(site_attributes(sites, plan))[in_fit])
-    figure = study.work("regress") / "figures" / "index_flood.png"
+    folder = study.work("regress")
+    subsets = subset_table(choice, attributes)
+    write_table(folder / "left_out.csv", left_out_table(gauges.gauge_ids, index, quantiles))
+    model = describe_models(config, index, quantiles, choice)
     draw_regression(
-        figure, table[table["in_fit"]], sites.loc[in_fit, "area_km2"].to_numpy() / config.area_in_km2, config
+        folder / "figures" / "index_flood.png",
+        index_table(config, gauges, index, region).frame,
+        gauges.sites["area_km2"].to_numpy() / config.area_in_km2,
+        config,
     )
+    if quantiles:
+        draw_quantile_residuals(
+            folder / "figures" / "residual_map.png",
+            gauges.sites[quantiles.in_fit],
+            quantiles.regression.fits[rare_place(quantiles.floods.aeps)].residuals,
+            float(quantiles.floods.aeps[rare_place(quantiles.floods.aeps)]),
+        )
+    tables = [index_table(config, gauges, index, region), subsets]
+    if quantiles:
+        tables.append(regression_table(config, gauges, quantiles))
     write_contribution(
-        study.work("regress"),
+        folder,
         Contribution(
             stage="regress",
-            tables=(Table("index_floods", table, FIT_COLUMNS),),
-            sections=(page_section(config, model, fit, table),),
-            warnings=tuple(influence_warnings(table, fit)),
-            models={"equations": {"index_flood": model}},
+            tables=tuple(tables),
+            sections=(index_section(config, gauges, index, quantiles, choice),),
+            warnings=(*faults.warnings, *regress_warnings(gauges, index, quantiles)),
+            models={"equations": model},
         ),
     )
-    return f"index flood of {int(in_fit.sum())} gauges on {', '.join(plan.columns)}"
+    told = f"index flood of {int(index.in_fit.sum())} gauges on {', '.join(index.plan.columns)}"
+    if quantiles:
+        told += f"; floods of {len(quantiles.floods.aeps)} AEPs at {int(quantiles.in_fit.sum())} gauges on {', '.join(quantiles.plan.columns)}"
+    return told
 
 
 def pool_of_gauges(pools: dict[str, Any], gauge_ids: list[str]) -> list[str]:
@@ -110,169 +145,247 @@ def pool_of_gauges(pools: dict[str, Any], gauge_ids: list[str]) -> list[str]:
     return [home.get(gauge_id, "") for gauge_id in gauge_ids]
 
 
-def plan_regression(config: StudyConfig, regions: list[str]) -> DesignPlan:
-    """Turn the configuration's attribute list into design columns."""
-    names = config.index_flood.attributes
-    return DesignPlan(
-        names=names,
-        transforms=tuple("log10" if name == "area" else config.attributes[name].transform for name in names),
-        regions=tuple(regions) if config.index_flood.by_region else (),
-    )
+def plan_design(config: StudyConfig, names: tuple[str, ...], regions: list[str], kind: str) -> DesignPlan:
+    """Turn a list of attributes into design columns; ``kind`` as `regression.regions`."""
+    known = tuple(sorted({name for name in regions if name})) if kind != "one" else ()
+    transforms = tuple("log10" if name == "area" else config.attributes[name].transform for name in names)
+    return DesignPlan(names, transforms, known, separate=kind == "separate")
 
 
 def site_attributes(sites: pd.DataFrame, plan: DesignPlan) -> dict[str, FloatArray]:
-    """Pick the plan's attributes from a table of sites; area in km2."""
-    return {name: sites["area_km2" if name == "area" else name].to_numpy(dtype=float) for name in plan.names}
-
-
-def fit_table(
-    config: StudyConfig,
-    sites: pd.DataFrame,
-    index: IndexFloods,
-    design: FloatArray,
-    fit: GlsFit,
-    in_fit: BoolArray,
-    region: list[str],
-) -> pd.DataFrame:
-    """A row per used gauge: sample, regression, residual, leverage."""
-    regression = np.full(len(sites), np.nan)
-    possible = np.isfinite(design).all(axis=1)
-    regression[possible] = 10 ** fit.predict(design[possible])[0]
-    leverage = np.full(len(sites), np.nan)
-    leverage[in_fit] = fit.leverage
-    residual = np.full(len(sites), np.nan)
-    residual[in_fit] = fit.residuals
-    reasons = np.where(
-        in_fit,
-        "",
-        np.where(
-            np.array([not name for name in region]),
-            "in no pool, so its sampling error is unknown",
-            np.where(
-                index.usable,
-                "an attribute has no value after its transformation",
-                "its index flood is zero or missing",
-            ),
-        ),
-    )
-    return pd.DataFrame(
-        {
-            "gauge_id": sites["gauge_id"],
-            "n_peaks": index.n,
-            "index_flood": index.flow / config.flow_in_m3s,
-            "se_log10": np.sqrt(index.log10_variance),
-            "regression": regression / config.flow_in_m3s,
-            "residual_log10": residual,
-            "leverage": leverage,
-            "in_fit": in_fit,
-            "reason": reasons,
-        }
-    )
-
-
-def describe_equation(
-    config: StudyConfig, plan: DesignPlan, fit: GlsFit, transformed: FloatArray
-) -> dict[str, Any]:
-    """All that is needed to apply the equation to a new site; internal units m3/s and km2."""
-    own_spread = fit.prediction_variance - fit.model_variance
+    """Pick the plan's attributes from a table of sites; area in km2, an absent attribute is missing."""
+    columns = {name: "area_km2" if name == "area" else name for name in plan.names}
     return {
-        "response": f"log10 of the {config.index_flood.statistic} annual flood, m3/s",
-        "statistic": config.index_flood.statistic,
-        "attributes": list(plan.names),
-        "transforms": list(plan.transforms),
-        "regions": list(plan.regions),
-        "columns": list(plan.columns),
-        "coefficients": fit.coefficients.tolist(),
-        "coefficient_covariance": fit.coefficient_covariance.tolist(),
-        "model_variance": fit.model_variance,
-        "model_variance_method": fit.method,
-        "degrees_of_freedom": fit.degrees_of_freedom,
-        "n_gauges": len(fit.fitted),
-        "average_prediction_variance": float(fit.prediction_variance.mean()),
-        "transformed_lower": transformed.min(axis=0).tolist(),
-        "transformed_upper": transformed.max(axis=0).tolist(),
-        "largest_spread": float(own_spread.max()),
-        "area_unit": "km2",
-        "flow_unit": "m3/s",
+        name: sites[column].to_numpy(dtype=float) if column in sites else np.full(len(sites), np.nan)
+        for name, column in columns.items()
     }
 
 
-def influence_warnings(table: pd.DataFrame, fit: GlsFit) -> list[Fault]:
-    """Warn of gauges with more than three times the average leverage, and of residuals beyond three standard errors."""
-    faults = FaultLog()
-    n, k = len(fit.fitted), len(fit.coefficients)
-    scale = np.sqrt(fit.model_variance + table["se_log10"] ** 2)
-    for row in table[table["leverage"] > 3 * k / n].itertuples():
+def rare_place(aeps: FloatArray) -> int:
+    """Place of AEP 0.01, or of the one nearest to it: what choices and figures go by."""
+    return int(np.argmin(np.abs(np.log(np.asarray(aeps) / 0.01))))
+
+
+def search_attributes(
+    config: StudyConfig,
+    gauges: UsedGauges,
+    floods: GaugeFloods,
+    targets: pd.DataFrame,
+    region: list[str],
+    faults: FaultLog,
+) -> AttributeChoice | None:
+    """Rank all subsets of the attributes that every gauge and target has; None with too few gauges."""
+    names = ("area", *sorted(config.attributes))
+    everything = plan_design(config, names, region, "one")
+    at_gauges = everything.transformed(site_attributes(gauges.sites, everything))
+    at_targets = everything.transformed(site_attributes(targets, everything))
+    usable = floods.usable & np.array([bool(name) for name in region])
+    whole = np.isfinite(at_gauges[usable]).all(axis=0) & np.isfinite(at_targets).all(axis=0)
+    missing = [name for name, there in zip(names, whole, strict=True) if not there]
+    if missing:
         faults.warning(
-            "high_leverage",
-            "regress",
-            f"gauge {row.gauge_id} has leverage {row.leverage:.2f} in the index-flood regression, over three times the average of {k / n:.2f}",
-            "Check its attributes: its flood steers the equation.",
-        )
-    for row in table[(table["residual_log10"].abs() > 3 * scale) & table["in_fit"]].itertuples():
+            "attribute_not_tried", "regress",
+            f"attributes with a missing or impossible value at a used gauge or target were not tried: {', '.join(missing)}",
+            "Complete them, or leave them out of `attributes`.",
+        )  # fmt: skip
+    if usable.sum() < 12 or not whole.any():
+        return None
+    place = rare_place(floods.aeps)
+    _, errors = describe_errors(gauges, floods, usable)
+    kind = "one" if config.regression.regions == "one" else "intercepts"
+    base = plan_design(config, (), region, kind).intercepts(
+        [r for r, use in zip(region, usable, strict=True) if use]
+    )
+    chosen = [name for name, there in zip(names, whole, strict=True) if there]
+    signs = ["positive" if name == "area" else config.attributes[name].sign for name in chosen]
+    return choose_attributes(
+        floods.log10_flow[usable, place],
+        base,
+        at_gauges[usable][:, whole],
+        chosen,
+        signs,
+        quantile_sampling_covariance(errors, float(floods.aeps[place])),
+        min(config.regression.largest_subset, int(usable.sum()) // 6),
+        config.regression.largest_inflation,
+        config.regression.model_variance,
+    )
+
+
+def describe_errors(
+    gauges: UsedGauges, floods: GaugeFloods, used: BoolArray
+) -> tuple[RegionalSd, QuantileErrorModel]:
+    """What the sampling errors of the used gauges' floods depend on."""
+    area = np.log10(gauges.sites["area_km2"].to_numpy()[used])
+    between = np.ix_(used, used)
+    sd = fit_regional_sd(floods.sd[used], area, floods.years[used])
+    errors = build_error_model(
+        sd.at(area),
+        floods.generalized_skew[used],
+        floods.generalized_covariance[between],
+        floods.years[used],
+        gauges.common_years[between],
+        gauges.correlation[between],
+    )
+    return sd, errors
+
+
+def fit_index(
+    config: StudyConfig,
+    gauges: UsedGauges,
+    pools: dict[str, Any],
+    region: list[str],
+    attributes: tuple[str, ...],
+    faults: FaultLog,
+) -> IndexEquation:
+    """Regress the index flood; too few gauges for the coefficients end the run."""
+    relative_sd = np.array([pools[name]["index_relative_sd"] if name else np.nan for name in region])
+    index = sample_index_floods(gauges.records, relative_sd, config.index_flood.statistic)
+    covariance = index_sampling_covariance(
+        index.log10_variance,
+        gauges.common_years,
+        np.maximum(index.n, 1),
+        gauges.correlation,
+        config.index_flood.statistic,
+    )
+    names = config.index_flood.attributes or attributes
+    kind = "intercepts" if config.index_flood.by_region else "one"
+    plan = plan_design(config, names, region, kind)
+    design = plan.design(site_attributes(gauges.sites, plan), region)
+    if (index.usable & np.isfinite(design).all(axis=1)).sum() <= design.shape[1] + 1:
+        faults.problem(
+            "too_few_gauges_for_regression", "regress",
+            f"the index-flood equation has {design.shape[1]} coefficients and too few gauges to fit them",
+            "Name fewer attributes in index_flood.attributes, or relax the screening.",
+        )  # fmt: skip
+        faults.stop_on_problems()
+    fit, in_fit = fit_index_regression(index, design, covariance, config.regression.model_variance)
+    y, between = np.log10(index.flow[in_fit]), np.ix_(in_fit, in_fit)
+    return IndexEquation(
+        index, plan, design, fit, in_fit,
+        leave_one_out(y, design[in_fit], covariance[between], fit),
+        diagnose_equation(
+            fit, y, covariance[between], gauges.distance[between],
+            random_stream(config.seed, "regress", "index_flood"),
+        ),
+    )  # fmt: skip
+
+
+def fit_quantiles(
+    config: StudyConfig,
+    gauges: UsedGauges,
+    floods: GaugeFloods,
+    region: list[str],
+    attributes: tuple[str, ...],
+    faults: FaultLog,
+) -> QuantileEquations | None:
+    """Regress the floods of all probabilities; None, with a warning, where too few gauges have them."""
+    plan = plan_design(config, attributes, region, config.regression.regions)
+    design = plan.design(site_attributes(gauges.sites, plan), region)
+    in_fit = floods.usable & np.isfinite(design).all(axis=1)
+    if in_fit.sum() <= design.shape[1] + 3:
         faults.warning(
-            "large_residual",
-            "regress",
-            f"the index flood of gauge {row.gauge_id} is {10**row.residual_log10:.2f} times its regression estimate",
-            "Check its area, attributes and units, and whether the gauge belongs to the study.",
+            "no_quantile_equations", "regress",
+            f"{int(in_fit.sum())} gauges have floods for regression, too few for {design.shape[1]} coefficients: there are no quantile equations",
+            "Name fewer attributes in regression.attributes, or relax the screening.",
+        )  # fmt: skip
+        return None
+    sd, errors = describe_errors(gauges, floods, in_fit)
+    y = floods.log10_flow[in_fit]
+    regression = fit_quantile_regression(
+        y, design[in_fit], errors, floods.aeps, config.regression.model_variance
+    )
+    between = np.ix_(in_fit, in_fit)
+    diagnostics = tuple(
+        diagnose_equation(
+            fit, y[:, p], quantile_sampling_covariance(errors, float(aep)), gauges.distance[between],
+            random_stream(config.seed, "regress", f"{aep:g}"),
         )
-    return faults.warnings
+        for p, (aep, fit) in enumerate(zip(floods.aeps, regression.fits, strict=True))
+    )  # fmt: skip
+    place = rare_place(floods.aeps)
+    influence: tuple[InfluenceTrial, ...] = ()
+    if plan.names and not plan.regions:
+        influence = try_regions_of_influence(
+            y[:, place],
+            design[in_fit],
+            plan.transformed(site_attributes(gauges.sites, plan))[in_fit],
+            quantile_sampling_covariance(errors, float(floods.aeps[place])),
+            INFLUENCE_SIZES,
+        )
+    return QuantileEquations(floods, plan, design, in_fit, sd, errors, regression, diagnostics, influence)
 
 
-def standard_error_percent(log10_variance: float) -> float:
-    """Standard error in percent of a lognormal error with this log10 variance."""
-    return float(100 * np.sqrt(np.expm1(log10_variance / LOG10_E**2)))
-
-
-def page_section(config: StudyConfig, model: dict[str, Any], fit: GlsFit, table: pd.DataFrame) -> Section:
-    """The page's words on the index flood."""
-    error = np.sqrt(np.diag(fit.coefficient_covariance))
-    left_out = int((~table["in_fit"]).sum())
-    widest = table.loc[table["in_fit"], "residual_log10"].abs().idxmax()
-    rows = tuple(
-        (name, f"{b:.4f}", f"{se:.4f}", f"{b / se:.1f}")
-        for name, b, se in zip(model["columns"], fit.coefficients, error, strict=True)
+def describe_models(
+    config: StudyConfig,
+    index: IndexEquation,
+    quantiles: QuantileEquations | None,
+    choice: AttributeChoice | None,
+) -> dict[str, Any]:
+    """The document ``equations.json``: all that is needed to apply the equations, units m3/s and km2."""
+    space = describe_space(
+        index.plan.names,
+        index.design[index.in_fit][:, max(len(index.plan.regions), 1) :],
+        index.fit.prediction_variance - index.fit.model_variance,
     )
-    return Section(
-        key="index_flood",
-        title="Index flood",
-        paragraphs=(
-            f"The index flood is the {config.index_flood.statistic} of the annual floods. Its logarithm was regressed on "
-            f"{', '.join(model['columns'][max(len(model['regions']), 1) :])} at {model['n_gauges']} gauges"
-            + (
-                f"; {left_out} used gauges could not take part (see the table of index floods)."
-                if left_out
-                else "."
+    document: dict[str, Any] = {
+        "units": {"flow": "m3/s", "area": "km2", "logarithm": "base 10"},
+        "index_flood": save_index_equation(index.plan, index.fit, space).to_dict()
+        | {
+            "response": f"log10 of the {config.index_flood.statistic} annual flood",
+            "statistic": config.index_flood.statistic,
+            "model_variance_method": index.fit.method,
+            "n_gauges": int(index.in_fit.sum()),
+            "diagnostics": tell_diagnostics(index.diagnostics),
+        },
+        "evidence_chooses": list(choice.best.attributes) if choice else [],
+    }
+    if quantiles:
+        regression = quantiles.regression
+        place = rare_place(regression.aeps)
+        saved = save_quantile_equations(
+            quantiles.plan,
+            regression,
+            describe_space(
+                quantiles.plan.names,
+                pick_transformed(quantiles),
+                regression.fits[place].prediction_variance - regression.fits[place].model_variance,
             ),
-            f"At a new site like these gauges the equation errs by {format_percent(standard_error_percent(model['average_prediction_variance']))} "
-            f"(standard error of prediction), of which {format_percent(standard_error_percent(fit.model_variance))} is the equation's own "
-            "lack of fit; sampling error of the gauges' floods is taken apart.",
-            f"The largest residual is at gauge {table.loc[widest, 'gauge_id']}: a sample index flood of "
-            f"{format_flow(table.loc[widest, 'index_flood'])} {config.units.flow} against "
-            f"{format_flow(table.loc[widest, 'regression'])} {config.units.flow} from the equation.",
-        ),
-        figures=(
-            Figure(
-                "index_flood.png",
-                "Left: sample index floods against the regression, with the line of equality and bars of two sampling standard errors. "
-                "Right: residuals against area; a trend would mean that the equation bends.",
-                "Two scatter plots of the index-flood regression: sample against regression, and residual against basin area.",
-            ),
-        ),
-        tables=(
-            PageTable(
-                "Coefficients of log10 index flood (m3/s; area in km2).",
-                ("term", "coefficient", "standard error", "ratio"),
-                rows,
-                "tables/equations.json",
-            ),
-        ),
-        method=(
-            "Generalized least squares with a known sampling covariance (Stedinger and Tasker, 1985), model-error variance by restricted "
-            "maximum likelihood. Sampling variances come from the pool's growth curve, not from each gauge's own scatter; shared years "
-            "correlate the sampling errors through the fitted distance model.",
-        ),
-    )
+        )
+        document["quantiles"] = saved.to_dict() | {
+            "response": "log10 of the flood, weighted skew",
+            "aeps": regression.aeps.tolist(),
+            "model_variance_method": regression.fits[0].method,
+            "n_gauges": int(quantiles.in_fit.sum()),
+            "own_coefficients": [fit.coefficients.tolist() for fit in regression.fits],
+            "regional_sd": {"constant": quantiles.sd.constant, "slope_log10_area_km2": quantiles.sd.slope},
+            "diagnostics": [tell_diagnostics(one) for one in quantiles.diagnostics],
+        }
+    return document
+
+
+def pick_transformed(quantiles: QuantileEquations) -> FloatArray:
+    """Transformed attributes (n, a) of the gauges in the fit, whatever the design does with regions."""
+    columns = quantiles.design[quantiles.in_fit]
+    first, count = max(len(quantiles.plan.regions), 1), len(quantiles.plan.names)
+    if not quantiles.plan.separate:
+        return columns[:, first:]
+    return columns[:, first:].reshape(len(columns), len(quantiles.plan.regions), count).sum(axis=1)
+
+
+def tell_diagnostics(found: EquationDiagnostics) -> dict[str, Any]:
+    """Diagnostics for a saved model; what is not finite is blank."""
+    numbers = {
+        "average_prediction_variance": found.average_prediction_variance,
+        "model_error_percent": found.model_error_percent,
+        "prediction_error_percent": found.prediction_error_percent,
+        "pseudo_r2": found.pseudo_r2,
+        "error_variance_ratio": found.error_variance_ratio,
+        "largest_leverage": found.largest_leverage,
+        "largest_influence": found.largest_influence,
+        "moran_i": found.spatial.statistic,
+        "moran_p": found.spatial.p_value,
+    }
+    return {name: value if np.isfinite(value) else None for name, value in numbers.items()}
 
 
 if __name__ == "__main__":

@@ -289,7 +289,7 @@ class Regression(_Part):
     attributes: tuple[str, ...] = Field(
         (), description="Attributes in the equations, by name; `area` is taken as log10. None named: the best subset, which the report asks you to name here."
     )
-    largest_subset: int = Field(4, ge=1, le=8, description="Attributes in a subset that is tried, at most.")
+    largest_subset: int = Field(5, ge=1, le=8, description="Attributes in a subset that is tried, at most.")
     regions: Literal["one", "intercepts", "separate"] = Field(
         "one", description="`one` equation; own `intercepts` for every region; or `separate` coefficients for every region."
     )
