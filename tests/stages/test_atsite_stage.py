@@ -180,7 +180,8 @@ def test_later_stages_find_every_digit_and_the_ingredients_of_pseudo_record_leng
     assert 10 < moments.loc["06", "pseudo_record_length"] < 40
     # Complete record: the systematic record is all of it.
     assert 40 == pytest.approx(moments.loc["01", "pseudo_record_length"])
-    assert 40 < moments.loc["02", "pseudo_record_length"] <= 121
+    # A historic flood that makes the skew large, and with it the error, takes nothing from the record.
+    assert 40 <= moments.loc["02", "pseudo_record_length"] <= 121
     assert 81 == moments.loc["02", "historic_period_years"]
     assert moments.loc["05", ["mean_log10", "pseudo_record_length"]].isna().all()
 

@@ -174,7 +174,9 @@ def exact_moments(results: GaugeResults, systematic: RecordFits) -> pd.DataFrame
 
     The pseudo record length is that of Veilleux (2011): systematic peaks times the ratio of the skew's mean square error
     from the systematic record alone over that from all data, at most the years in the fit. Where low floods put the
-    skew of the whole systematic record out of range, a complete record with the station skew stands for it.
+    skew of the whole systematic record out of range, a complete record with the station skew stands for it. Historic
+    knowledge alone never lowers it: where the systematic record is complete and without low floods, it is at least
+    as long as that.
     """
     fits, station = results.fits, results.fits.station
     moments = station.moments
@@ -204,6 +206,9 @@ def exact_moments(results: GaugeResults, systematic: RecordFits) -> pd.DataFrame
     )
     with np.errstate(invalid="ignore", divide="ignore"):
         pseudo = systematic.n_peaks * own / station.station_skew_mse
+    complete_record = (fits.low_floods.count == 0) & (systematic.n_peaks == systematic.record_years)
+    pseudo = np.where(complete_record, np.maximum(pseudo, systematic.n_peaks), pseudo)
+    frame["complete_skew_mse"] = complete
     frame["pseudo_record_length"] = np.minimum(pseudo, fits.record_years)
     numbers = frame.columns[frame.columns.get_loc("mean_log10") :]
     unfitted = ~results.fitted
