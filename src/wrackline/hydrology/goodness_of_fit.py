@@ -26,6 +26,7 @@ LEVEL = 0.05
 LARGEST = 3
 """Largest floods whose relative error is averaged."""
 _REPLICATES = 400
+_FEWEST_FEASIBLE = 50
 _N_CLASSES = np.array(
     [5, 6, 7, 8, 9, 10, 12, 14, 16, 18, 20, 23, 26, 30, 34, 38, 43, 48, 55, 62, 70, 80, 92, 105, 120, 150, 200]
 )  # fmt: skip
@@ -51,7 +52,7 @@ class Agreement:
         Anderson-Darling statistic of the exactly known systematic peaks within their year's perception threshold, each
         by its probability under the fit given that it lies within it.
     anderson_darling_critical : float array
-        Its upper 5 % point when the family is true.
+        Its upper 5 % point when the family is true and no peak lies beyond the bound of its fit.
     largest_floods_error : float array
         Mean of ``|fitted quantile - peak| / peak`` of the three largest plotted peaks, at their plotting positions.
     beyond_bound : bool array
@@ -265,10 +266,14 @@ def critical_values(
     expected = law.quantile(parameters[own], np.tile(1 - aep, len(x)))
     ppcc = _correlate(own, peaks, expected, len(x))
     probability = law.cdf(parameters[own], peaks)
+    outside = (probability <= 0) | (probability >= 1)
+    feasible = np.bincount(own, outside, minlength=len(x)) == 0
     if censored:
         by_record = probability.reshape(len(x), plotted)
         base = by_record[:, :1]
         probability = ((by_record[:, 1:] - base) / (1 - base)).ravel()
         own = np.repeat(np.arange(len(x)), plotted - 1)
     statistic = _anderson_darling(own, probability, len(x))
-    return float(np.quantile(ppcc, LEVEL)), float(np.quantile(statistic, 1 - LEVEL))
+    # A fit with a peak beyond its bound does not serve anyway, and its statistic has no size of its own.
+    judged = statistic[feasible] if feasible.sum() >= _FEWEST_FEASIBLE else statistic
+    return float(np.quantile(ppcc, LEVEL)), float(np.quantile(judged, 1 - LEVEL))
