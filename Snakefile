@@ -4,9 +4,12 @@
 #   snakemake --configfile FOLDER/study.yaml     your study; all its files lie in FOLDER
 #
 # Stages are called through the shell; the science is in src/wrackline.
+import sys
 from pathlib import Path
 
 from snakemake.utils import min_version
+
+sys.path.insert(0, str(Path(workflow.basedir) / "workflow"))
 from study_folder import find_study, forget_damaged, lock_study, read_study
 from telling import hush, tell_failure, tell_results
 from wiring import STAGES, prepare_shell, settings, source_digest, stage_call
@@ -14,7 +17,7 @@ from wiring import STAGES, prepare_shell, settings, source_digest, stage_call
 min_version("9.20")
 
 STUDY = find_study(
-    workflow, default=Path(workflow.basedir).parent / "example_region" / "study.yaml"
+    workflow, default=Path(workflow.basedir) / "example_region" / "study.yaml"
 )
 CONFIG = read_study(STUDY)
 RESULTS = CONFIG.output.replace("{", "{{").replace("}", "}}")
@@ -41,14 +44,14 @@ rule all:
         manifest=f"{RESULTS}/manifest.json",
 
 
-include: "rules/intake.smk"
-include: "rules/screen.smk"
-include: "rules/dependence.smk"
-include: "rules/atsite.smk"
-include: "rules/pool.smk"
-include: "rules/regress.smk"
-include: "rules/estimate.smk"
-include: "rules/publish.smk"
+include: "workflow/rules/intake.smk"
+include: "workflow/rules/screen.smk"
+include: "workflow/rules/dependence.smk"
+include: "workflow/rules/atsite.smk"
+include: "workflow/rules/pool.smk"
+include: "workflow/rules/regress.smk"
+include: "workflow/rules/estimate.smk"
+include: "workflow/rules/publish.smk"
 
 
 onsuccess:
