@@ -12,7 +12,7 @@ from snakemake.utils import min_version
 sys.path.insert(0, str(Path(workflow.basedir) / "workflow"))
 from study_folder import find_study, forget_damaged, lock_study, read_study
 from telling import hush, tell_failure, tell_results
-from wiring import STAGES, prepare_shell, settings, source_digest, stage_call
+from wiring import FAILED, STAGES, prepare_shell, settings, source_digest, stage_call
 
 min_version("9.20")
 
@@ -27,6 +27,7 @@ if workflow.is_main_process:
     lock_study(STUDY.parent)
     if not workflow.dryrun:
         forget_damaged(STUDY.parent, STAGES, CONFIG.output)
+        (STUDY.parent / FAILED).unlink(missing_ok=True)
 prepare_shell(STUDY)
 
 
@@ -59,4 +60,4 @@ onsuccess:
 
 
 onerror:
-    tell_failure(STUDY.parent, STAGES)
+    tell_failure(STUDY.parent)

@@ -6,6 +6,8 @@ import logging
 import sys
 from pathlib import Path
 
+from wiring import FAILED
+
 CHATTER = (
     "Assuming unrestricted shared filesystem",
     "Building DAG of jobs",
@@ -50,11 +52,11 @@ def tell_results(results: Path, beginning: str = "The study is done.") -> None:
     )
 
 
-def tell_failure(folder: Path, stages: tuple[str, ...]) -> None:
+def tell_failure(folder: Path) -> None:
     """Say what the failed stage said, and where its log lies; results of an earlier run were not touched before `publish`."""
-    logs = [folder / "work" / "logs" / f"{stage}.log" for stage in stages]
-    written = [log for log in logs if log.is_file()]
-    if not written:
+    failed = folder / FAILED
+    if not failed.is_file():
         return
-    last = max(written, key=lambda log: log.stat().st_mtime_ns)
-    print(f"\nThe study stopped in stage `{last.stem}`. Its log: {last}", file=sys.stderr)
+    stage = failed.read_text(encoding="utf-8").split()[0]
+    log = folder / "work" / "logs" / f"{stage}.log"
+    print(f"\nThe study stopped in stage `{stage}`. Its log: {log}", file=sys.stderr)

@@ -17,6 +17,10 @@ DATA_ENDINGS = {".j2", ".css", ".js", ".yaml"}
 STAGES = ("intake", "screen", "dependence", "atsite", "pool", "regress", "estimate", "publish")
 
 
+FAILED = "work/logs/failed"
+"""Stages that failed in this run, the first one first; the engine ends others that ran beside it."""
+
+
 def stage_call(stage: str) -> str:
     """Return the shell command of a stage: its output goes to the screen and to the rule's log.
 
@@ -26,7 +30,7 @@ def stage_call(stage: str) -> str:
     place = f"[{STAGES.index(stage) + 1} of {len(STAGES)}] {stage} ..."
     return (
         f'echo \'{place}\'; PYTHONPATH="$WRACKLINE_SOURCES" python -P -m {PACKAGE}.stages.{stage} "$WRACKLINE_STUDY"'
-        " 2>&1 | tee {log:q}"
+        f" 2>&1 | tee {{log:q}} || {{{{ echo {stage} >> {FAILED}; exit 1; }}}}"
     )
 
 

@@ -54,7 +54,7 @@ pooling:
 
 index_flood:
   statistic: median           # or mean
-  attributes: [area]          # attributes of the index-flood equation; `area` is taken as log10
+  attributes: []              # attributes of the index-flood equation, such as [area, rain]; none: those of `regression`
 
 # What a peak's flags do to its use: keep, exclude, below (at most the flow given), above (at least).
 # flags:
