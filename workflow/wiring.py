@@ -14,7 +14,7 @@ from typing import Any
 SOURCES = Path(__file__).resolve().parents[1] / "src"
 PACKAGE = "wrackline"
 DATA_ENDINGS = {".j2", ".css", ".js", ".yaml"}
-STAGES = ("intake", "screen", "dependence", "atsite", "pool", "regress", "estimate", "publish")
+STAGES = ("intake", "screen", "dependence", "atsite", "skew", "weight", "pool", "regress", "validate", "estimate", "publish")
 
 
 FAILED = "work/logs/failed"

@@ -82,6 +82,8 @@ def work(tmp_path_factory: pytest.TempPathFactory) -> Path:
 def table(work: Path) -> Callable[[str], pd.DataFrame]:
     contribution = read_contribution(work)
     frames = {t.name: t.frame for t in contribution.tables}
+    frames["gauge_moments"] = read_table(work / "gauge_moments.csv", text=("reasons",))
+    frames["gauge_estimates"] = read_table(work / "gauge_estimates.csv", text=("source",))
     return lambda name: frames[name].copy()
 
 

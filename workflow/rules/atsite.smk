@@ -8,6 +8,8 @@ rule atsite:
     output:
         contribution="work/atsite/contribution.json",
         moments="work/atsite/moments.csv",
+        gauge_moments="work/atsite/gauge_moments.csv",
+        gauge_estimates="work/atsite/gauge_estimates.csv",
     log:
         "work/logs/atsite.log",
     conda:

@@ -8,12 +8,16 @@ rule publish:
         basins="work/intake/basins.csv",
         regions="work/intake/regions.csv",
         records="work/screen/records.csv",
+        skew_map="work/skew/skew.tif",
+        skew_cells="work/skew/skew_cells.csv",
+        skew_contours="work/skew/skew_contours.csv",
         study=STUDY.name.replace("{", "{{").replace("}", "}}"),
     output:
         page=update(f"{RESULTS}/report.html"),
         manifest=update(f"{RESULTS}/manifest.json"),
         columns=update(f"{RESULTS}/tables/columns.csv"),
         map=update(f"{RESULTS}/maps/study.gpkg"),
+        skew_map=update(f"{RESULTS}/maps/skew.tif"),
     log:
         "work/logs/publish.log",
     conda:

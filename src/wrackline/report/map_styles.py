@@ -6,7 +6,7 @@ from collections.abc import Sequence
 from xml.etree import ElementTree as ET
 
 from wrackline.report.maps import group_look
-from wrackline.report.style import INK, MUTED, PAPER
+from wrackline.report.style import INK, MUTED, PAPER, WARM
 
 SLD = "http://www.opengis.net/sld"
 OGC = "http://www.opengis.net/ogc"
@@ -43,6 +43,10 @@ def style_layers(groups: Sequence[str]) -> dict[str, str]:
         ),
         "basins": _document("basins", "Basins", [_rule("basin", _polygon(MUTED, 0.6))]),
         "regions": _document("regions", "Regions", [_rule("region", _polygon(INK, 1.4, dashes="8 4"))]),
+        "skew_cells": _document("skew_cells", "Cells of the skew map", [_rule("cell", _polygon(MUTED, 0.2))]),
+        "skew_contours": _document(
+            "skew_contours", "Lines of equal generalized skew", [_rule("generalized skew", _line(WARM, 1.0))]
+        ),
     }
 
 
@@ -93,6 +97,13 @@ def _polygon(colour: str, width: float, dashes: str = "") -> ET.Element:
     _parameters(
         ET.SubElement(symbol, f"{{{SLD}}}Stroke"), look | ({"stroke-dasharray": dashes} if dashes else {})
     )
+    return symbol
+
+
+def _line(colour: str, width: float) -> ET.Element:
+    symbol = ET.Element(f"{{{SLD}}}LineSymbolizer")
+    look = {"stroke": colour, "stroke-width": f"{width:g}"}
+    _parameters(ET.SubElement(symbol, f"{{{SLD}}}Stroke"), look)
     return symbol
 
 

@@ -21,7 +21,7 @@ from wrackline.report.figures_atsite import (
     draw_station_skews,
 )
 from wrackline.stages.atsite_page import station_section
-from wrackline.stages.atsite_tables import GaugeResults, all_tables, exact_moments
+from wrackline.stages.atsite_tables import GaugeResults, all_tables, exact_moments, station_tables
 from wrackline.stages.running import StudyFiles, main
 from wrackline.study.config import StudyConfig
 from wrackline.study.contribution import Contribution, write_contribution
@@ -58,6 +58,9 @@ def run(study: StudyFiles) -> str:
         low_flood_thresholds=np.zeros(records.n_gauges),
     )
     write_table(folder / "moments.csv", exact_moments(results, systematic))
+    # The stage `weight` publishes these two, completed by the fits with weighted skew.
+    for station_table in station_tables(results, config.flow_in_m3s):
+        write_table(folder / f"{station_table.name}.csv", station_table.frame)
     scale = FlowScale(config.units.flow, config.flow_in_m3s)
     shown, faults = _choose_gauges(results, config)
     figures = folder / "figures"

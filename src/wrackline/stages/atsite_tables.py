@@ -156,10 +156,8 @@ class GaugeResults:
 
 
 def all_tables(results: GaugeResults, flow_in_m3s: float, numerator: str) -> tuple[Table, ...]:
-    """Return the published tables."""
+    """Return the tables that this stage publishes."""
     tables = [
-        _moments(results, flow_in_m3s),
-        _estimates(results, flow_in_m3s),
         _low_floods(results, flow_in_m3s),
         _positions(results, flow_in_m3s, numerator),
         _warnings(results),
@@ -167,6 +165,11 @@ def all_tables(results: GaugeResults, flow_in_m3s: float, numerator: str) -> tup
     if results.families:
         tables += [_family_fits(results, flow_in_m3s), families_by_region(results)]
     return tuple(tables)
+
+
+def station_tables(results: GaugeResults, flow_in_m3s: float) -> tuple[Table, Table]:
+    """Return moments and estimates by station skew, with the columns of the tables that a study publishes."""
+    return _moments(results, flow_in_m3s), _estimates(results, flow_in_m3s)
 
 
 def exact_moments(results: GaugeResults, systematic: RecordFits) -> pd.DataFrame:

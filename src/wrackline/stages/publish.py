@@ -25,11 +25,12 @@ from wrackline.study.gis import Layer, write_geopackage
 from wrackline.study.handover import read_records, read_sites
 from wrackline.study.provenance import MANIFEST, PAGE, build_manifest, digest_file, written_files
 from wrackline.study.published import StageOutput, column_table, read_stages, warning_table
-from wrackline.study.study_layers import study_layers
+from wrackline.study.study_layers import skew_layers, study_layers
 from wrackline.study.tables import Column, Table, write_table, write_text
 
 STAGING = ".publishing"
 MAP_FIGURE = "publish_map.png"
+SKEW_MAP = "skew.tif"
 PEAKS_COLUMNS = (
     Column("gauge_id", "text", "gauge"),
     Column("water_year", "year", "water year, named by the calendar year in which it ends"),
@@ -63,8 +64,11 @@ def run(study: StudyFiles) -> str:
         layers = study_layers(
             study.config, study.work("intake"), material.gauges, material.targets, material.tables
         )
+        layers |= skew_layers(study.work("skew"))
         _draw_map(folder / "figures" / MAP_FIGURE, material, layers)
         write_geopackage(folder / "maps" / "study.gpkg", layers)
+        if (study.work("skew") / SKEW_MAP).is_file():
+            shutil.copyfile(study.work("skew") / SKEW_MAP, folder / "maps" / SKEW_MAP)
         for name, style in style_layers(_regions(layers)).items():
             write_text(folder / "maps" / f"{name}.sld", style)
         manifest = build_manifest(study.config, study.study_file, folder)

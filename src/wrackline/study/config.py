@@ -212,7 +212,7 @@ class Skew(_Part):
         None, gt=0, description="The map is blank farther than this from every gauge of the model; blank: twice the distance within which nine of ten of them have a neighbour."
     )
     adopted: Literal["weighted_skew", "station"] = Field(
-        "weighted_skew", description="The fit whose floods the study adopts at gauges."
+        "weighted_skew", description="The fit that speaks for the record of a gauge."
     )
 
     @property

@@ -67,6 +67,18 @@ def polygon_layer(frame: pd.DataFrame, columns: tuple[Column, ...]) -> Layer:
     )
 
 
+def line_layer(frame: pd.DataFrame, columns: tuple[Column, ...]) -> Layer:
+    """Make a layer of lines from a column ``wkt`` (EPSG:4326); the other columns stay."""
+    import geopandas as gpd
+    import shapely
+
+    shapes = np.atleast_1d(shapely.from_wkt(frame["wkt"].to_numpy(dtype=object)))
+    geometry = gpd.GeoSeries(list(shapes), index=frame.index, crs=CRS)
+    return Layer(
+        gpd.GeoDataFrame(_storable(frame.drop(columns="wkt")), geometry=geometry), "LineString", columns
+    )
+
+
 def read_polygons(path: Path, key: str) -> pd.DataFrame:
     """Read a table of polygons (``key``, ``wkt``) as the intake wrote it; no rows where there is none."""
     if not path.exists():

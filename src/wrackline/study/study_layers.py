@@ -9,9 +9,9 @@ from pathlib import Path
 import pandas as pd
 
 from wrackline.study.config import StudyConfig
-from wrackline.study.gis import Layer, point_layer, polygon_layer, read_polygons
+from wrackline.study.gis import Layer, line_layer, point_layer, polygon_layer, read_polygons
 from wrackline.study.published import declared_unit
-from wrackline.study.tables import Column, Table
+from wrackline.study.tables import Column, Table, read_table
 
 SITE_COLUMNS = (
     Column("name", "text", "name"),
@@ -22,8 +22,17 @@ SITE_COLUMNS = (
 )
 GAUGE_TABLES = {
     "gauge_screening": ("n_peaks", "first_year", "last_year", "used", "reasons"),
+    "gauge_moments": ("station_skew", "generalized_skew", "generalized_skew_mse", "weighted_skew"),
     "gauge_lmoments": ("n", "mean", "lcv", "lskew", "lkurtosis"),
 }
+SKEW_CELLS = (
+    Column("cell", "text", "row and column in the raster skew.tif, from the north-west corner"),
+    Column("skew", "1", "generalized skew of log10 annual peaks"),
+    Column("mse", "1", "its mean square error"),
+)
+SKEW_CONTOURS = (
+    Column("skew", "1", "generalized skew along the line; no lines where the map has steps or one level"),
+)
 STANDING = Column("standing", "text", "used or not used, as the styles read it")
 
 
@@ -56,6 +65,18 @@ def study_layers(
             read_polygons(intake / "regions.csv", "region").sort_values("region", ignore_index=True),
             (Column("region", "text", "name of the region"),),
         ),
+    }
+
+
+def skew_layers(folder: Path) -> dict[str, Layer]:
+    """Return the layers ``skew_contours`` and ``skew_cells`` that the stage of generalized skew left, or none."""
+    if not (folder / "skew_cells.csv").is_file():
+        return {}
+    cells = read_table(folder / "skew_cells.csv", text=("cell", "wkt"))
+    contours = read_table(folder / "skew_contours.csv", text=("wkt",))
+    return {
+        "skew_cells": polygon_layer(cells, SKEW_CELLS),
+        "skew_contours": line_layer(contours, SKEW_CONTOURS),
     }
 
 
