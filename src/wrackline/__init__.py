@@ -6,6 +6,7 @@ import importlib
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
+    from wrackline.estimating import estimate
     from wrackline.fitting import fit
     from wrackline.study.checking import check
     from wrackline.study.importing import import_peaks
@@ -13,13 +14,14 @@ if TYPE_CHECKING:
 
 _HOME = {
     "check": "wrackline.study.checking",
+    "estimate": "wrackline.estimating",
     "fit": "wrackline.fitting",
     "import_peaks": "wrackline.study.importing",
     "read_study": "wrackline.study.inputs",
 }
 """Where the names of the Python interface live; imported when first used, so that a stage stays quick to start."""
 
-__all__ = ["check", "fit", "import_peaks", "read_study"]
+__all__ = ["check", "estimate", "fit", "import_peaks", "read_study"]
 
 
 def __getattr__(name: str) -> Any:

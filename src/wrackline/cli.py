@@ -1,4 +1,4 @@
-"""The command line: ``wrackline check``, ``new``, ``import``, ``fit``."""
+"""The command line: ``wrackline check``, ``new``, ``import``, ``fit``, ``estimate``."""
 
 from __future__ import annotations
 
@@ -12,6 +12,7 @@ import typer
 from rich.console import Console
 from rich.text import Text
 
+from wrackline.estimate_command import estimate
 from wrackline.fit_command import fit
 from wrackline.import_command import import_files
 from wrackline.study.faults import Fault, StudyFaults
@@ -74,6 +75,7 @@ def new(folder: Annotated[Path, typer.Argument(metavar="FOLDER", help="The folde
 
 
 app.command()(fit)
+app.command()(estimate)
 app.command("import")(import_files)
 
 

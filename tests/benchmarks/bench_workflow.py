@@ -14,7 +14,7 @@ from typing import Any
 
 REPOSITORY = Path(__file__).resolve().parents[2]
 EXAMPLE = REPOSITORY / "example_region"
-STAGES = ("intake", "screen", "dependence", "pool", "regress", "estimate", "publish")
+STAGES = ("intake", "screen", "dependence", "pool", "regress", "validate", "estimate", "publish")
 IN_ONE_PROCESS = (
     "import importlib, sys; from pathlib import Path\n"
     "from wrackline.stages.running import StudyFiles\n"

@@ -11,7 +11,7 @@ from wrackline.hydrology.index_flood import (
     sample_index_floods,
 )
 from wrackline.hydrology.records import exact_records
-from wrackline.hydrology.ungauged import scale_growth_curve
+from wrackline.hydrology.ungauged import scale_growth_curve, state_intervals
 
 
 def records_of(*floods, years=None):
@@ -78,8 +78,9 @@ def test_design_repeats_for_new_sites_and_refuses_unknown_regions():
 
 
 def test_interval_adds_the_two_variances_in_log_space():
-    e = scale_growth_curve(
-        np.array([2.0]), np.array([0.01]), 10**6, np.array([[2.0]]), np.array([[0.3]]), 0.90
+    e = state_intervals(
+        scale_growth_curve(np.array([2.0]), np.array([0.01]), 10**6, np.array([[2.0]]), np.array([[0.3]])),
+        0.90,
     )
     se = np.sqrt(0.01 + (0.3 * LOG10_E) ** 2)
     assert e.se_log10[0, 0] == pytest.approx(se, rel=1e-12)

@@ -1,9 +1,16 @@
-# Floods at the ungauged sites.
+# Floods at the gauges and at the ungauged targets, and the models saved for sites to come.
 rule estimate:
     input:
+        records="work/screen/records.csv",
+        used="work/screen/gauges.csv",
+        gauges="work/intake/gauges.csv",
         targets="work/intake/targets.csv",
+        ledger="work/intake/ledger.csv",
+        dependence="work/dependence/model.json",
         growth="work/pool/growth.json",
         equations="work/regress/tables/equations.json",
+        routes="work/validate/routes.json",
+        left_out="work/validate/regional_left_out.csv",
     output:
         contribution="work/estimate/contribution.json",
     log:
@@ -11,7 +18,18 @@ rule estimate:
     conda:
         "../envs/python.yaml"
     params:
-        settings=settings(CONFIG, "aeps", "units", "confidence"),
+        settings=settings(
+            CONFIG,
+            "study",
+            "aeps",
+            "attributes",
+            "units",
+            "confidence",
+            "index_flood",
+            "regression",
+            "pooling",
+            "skew",
+        ),
         sources=source_digest("estimate"),
     shell:
         stage_call("estimate")

@@ -29,6 +29,7 @@ READING_ORDER = (
     "regression",
     "validation",
     "estimates",
+    "appendices",
 )
 """Section keys in the order a reviewer reads; other keys stand before the estimates."""
 MONTHS = (
