@@ -6,6 +6,9 @@ rule regress:
         gauges="work/intake/gauges.csv",
         targets="work/intake/targets.csv",
         dependence="work/dependence/model.json",
+        station="work/atsite/moments.csv",
+        skew="work/skew/sites.csv",
+        skew_errors="work/skew/error_covariance.npy",
         growth="work/pool/growth.json",
     output:
         contribution="work/regress/contribution.json",
@@ -18,6 +21,7 @@ rule regress:
     params:
         settings=settings(
             CONFIG,
+            "at_site",
             "index_flood",
             "regression",
             "attributes",

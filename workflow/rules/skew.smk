@@ -14,6 +14,7 @@ rule skew:
         contribution="work/skew/contribution.json",
         sites="work/skew/sites.csv",
         model="work/skew/model.json",
+        errors="work/skew/error_covariance.npy",
         map="work/skew/skew.tif",
         cells="work/skew/skew_cells.csv",
         contours="work/skew/skew_contours.csv",

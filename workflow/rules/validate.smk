@@ -5,6 +5,9 @@ rule validate:
         used="work/screen/gauges.csv",
         gauges="work/intake/gauges.csv",
         dependence="work/dependence/model.json",
+        station="work/atsite/moments.csv",
+        skew="work/skew/sites.csv",
+        skew_errors="work/skew/error_covariance.npy",
         growth="work/pool/growth.json",
         equations="work/regress/tables/equations.json",
         left_out="work/regress/left_out.csv",
@@ -18,7 +21,13 @@ rule validate:
         "../envs/python.yaml"
     params:
         settings=settings(
-            CONFIG, "aeps", "regression", "index_flood", "units", "confidence"
+            CONFIG,
+            "aeps",
+            "at_site",
+            "regression",
+            "index_flood",
+            "units",
+            "confidence",
         ),
         sources=source_digest("validate"),
     shell:

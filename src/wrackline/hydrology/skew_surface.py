@@ -73,6 +73,19 @@ class SkewSurface:
         )
         return design @ self.coefficients + pull @ self.residuals, variance
 
+    def error_covariance(
+        self, design: FloatArray, distance_km: FloatArray, between_km: FloatArray
+    ) -> FloatArray:
+        """Return the covariance (m, m) of the errors of predicted skews at m sites.
+
+        ``distance_km`` (m, n) to the stations, ``between_km`` (m, m) between the sites.
+        """
+        near = self.model_variance * spatial_correlation(distance_km, self.range_km)
+        pull = near @ self.precision
+        rest = design - pull @ self.design
+        own = self.model_variance * spatial_correlation(between_km, self.range_km)
+        return own - pull @ near.T + rest @ self.coefficient_covariance @ rest.T
+
 
 def spatial_correlation(distance_km: FloatArray, range_km: float) -> FloatArray:
     """Return ``exp(-d / range)``; with range 0, one at distance 0 and zero elsewhere."""

@@ -11,17 +11,13 @@ import pandas as pd
 from wrackline.hydrology.at_site import fit_records
 from wrackline.hydrology.dependence import DistanceModel
 from wrackline.hydrology.distances import great_circle_km
-from wrackline.hydrology.generalized_skew import (
-    fit_skew_model,
-    generalized_skew_error_covariance,
-    prepare_station_skews,
-)
 from wrackline.hydrology.index_flood import count_common_years
 from wrackline.hydrology.record_fits import RecordFits
 from wrackline.hydrology.records import BoolArray, FloatArray, PeakRecords
 from wrackline.stages.running import StudyFiles
 from wrackline.study.config import StudyConfig
 from wrackline.study.handover import read_records, read_sites
+from wrackline.study.tables import read_table
 
 FEWEST_YEARS = 10
 """Years of record behind a gauge's flood in a regression, at least."""
@@ -133,35 +129,26 @@ def distances_between(some: pd.DataFrame, others: pd.DataFrame) -> FloatArray:
     )
 
 
-def fit_gauge_floods(
-    records: PeakRecords,
-    correlation: FloatArray,
-    common_years: FloatArray,
-    aeps: tuple[float, ...],
-    confidence: float,
-) -> GaugeFloods:
-    """Fit gauges with a constant generalized skew made from these records themselves."""
-    years = np.diff(records.keep_rows(records.systematic_exact).offsets).astype(float)
-    station = fit_records(records, aeps=aeps, confidence=confidence)
-    skew = station.station.moments.skew
-    shaping = np.flatnonzero(np.isfinite(skew) & (years >= 25))
-    if len(shaping) < 5:
-        shaping = np.flatnonzero(np.isfinite(skew) & (years >= FEWEST_YEARS))
-    between = np.ix_(shaping, shaping)
-    design = np.ones((len(shaping), 1))
-    stations = prepare_station_skews(
-        skew[shaping], years[shaping], design, correlation[between], common_years[between]
-    )
-    model = fit_skew_model(stations, design)
-    covariance = generalized_skew_error_covariance(model, np.ones((records.n_gauges, 1)))
-    generalized = np.full(records.n_gauges, float(model.coefficients[0]))
-    fits = fit_records(records, generalized, np.diagonal(covariance), aeps, confidence)
-    return GaugeFloods(np.array(aeps), fits, years, generalized, covariance)
-
-
 def read_gauge_floods(study: StudyFiles, gauges: UsedGauges) -> GaugeFloods:
-    """The floods at the used gauges for all probabilities of the study."""
-    config = study.config
-    return fit_gauge_floods(
-        gauges.records, gauges.correlation, gauges.common_years, all_aeps(config), config.confidence
+    """Fit the used gauges for all probabilities of the study, with the generalized skew that the stage `skew` left."""
+    config, aeps = study.config, all_aeps(study.config)
+    sites = read_table(study.work("skew") / "sites.csv")
+    ids = sites.loc[sites["gauge"], "site_id"].tolist()
+    row = {gauge_id: i for i, gauge_id in enumerate(ids)}
+    at = np.array([row[gauge_id] for gauge_id in gauges.gauge_ids], dtype=np.int64)
+    covariance = np.load(study.work("skew") / "error_covariance.npy")[np.ix_(at, at)]
+    skew = sites["generalized_skew"].to_numpy(dtype=float)[at]
+    mse = sites["generalized_skew_mse"].to_numpy(dtype=float)[at]
+    moments = read_table(study.work("atsite") / "moments.csv").set_index("gauge_id").loc[gauges.gauge_ids]
+    fits = fit_records(
+        gauges.records,
+        skew,
+        mse,
+        aeps,
+        config.confidence,
+        moments["low_outlier_threshold_set_m3s"].to_numpy(dtype=float),
+        np.inf if config.at_site.skew_bound is None else config.at_site.skew_bound,
     )
+    records = gauges.records
+    years = np.diff(records.keep_rows(records.systematic_exact).offsets).astype(float)
+    return GaugeFloods(np.array(aeps), fits, years, skew, covariance)

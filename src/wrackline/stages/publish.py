@@ -70,7 +70,8 @@ def run(study: StudyFiles) -> str:
         if (study.work("skew") / SKEW_MAP).is_file():
             shutil.copyfile(study.work("skew") / SKEW_MAP, folder / "maps" / SKEW_MAP)
         for name, style in style_layers(_regions(layers)).items():
-            write_text(folder / "maps" / f"{name}.sld", style)
+            if name in layers:
+                write_text(folder / "maps" / f"{name}.sld", style)
         manifest = build_manifest(study.config, study.study_file, folder)
         page = _page(study, material, folder, Run.from_manifest(manifest))
         write_text(folder / PAGE, render_page(page))

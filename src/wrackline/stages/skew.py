@@ -7,6 +7,8 @@ from pathlib import Path
 
 import numpy as np
 
+from wrackline.hydrology.distances import great_circle_km
+from wrackline.hydrology.generalized_skew import generalized_skew_error_covariance
 from wrackline.hydrology.records import BoolArray, FloatArray
 from wrackline.hydrology.skew_candidates import Comparison, compare_candidates, plan_candidates
 from wrackline.hydrology.skew_surface import SkewSurface
@@ -45,6 +47,7 @@ FEWEST_GAUGES = 5
 """With fewer gauges no generalized skew is fitted."""
 CELLS_AT_ONCE = 2000
 KM_PER_DEGREE = 111.195
+ERROR_COVARIANCE = "error_covariance.npy"
 
 
 @dataclass(frozen=True)
@@ -97,6 +100,7 @@ def run(study: StudyFiles) -> str:
     write_table(
         folder / "sites.csv", work_sites(material, sites.skew, sites.mse, sites.left_out, sites.design)
     )
+    np.save(folder / ERROR_COVARIANCE, shared_errors(material, comparison, sites))
     figures = _draw(folder / "figures", config, material, comparison, sites, drawn)
     tables = skew_tables(config, material, comparison, sites.skew, sites.mse, sites.left_out, sites.outside)
     section = skew_section(config, material, comparison, tables, model, figures, drawn.reach_km)
@@ -202,6 +206,29 @@ def _predict_points(
         distance = material.distance_to_serving(latitude[block], longitude[block])
         skew[block], mse[block] = comparison.chosen.predict(columns[block], distance)
     return skew, mse
+
+
+def shared_errors(material: SkewMaterial, comparison: Comparison | None, sites: SkewAtSites) -> FloatArray:
+    """Covariance of the errors of the generalized skews at all gauges, (g, g), in order of identifier.
+
+    The diagonal holds every gauge's own mean square error. Off it stands what the model's errors have in common: the error of
+    its coefficients, and of a surface also that of neighbours. A given skew says nothing of that: zero.
+    """
+    g = material.n_gauges
+    covariance = np.zeros((g, g))
+    if comparison is not None:
+        model, design = comparison.chosen.model, sites.design[:g]
+        known = np.isfinite(design).all(axis=1)
+        at = np.ix_(known, known)
+        if isinstance(model, SkewSurface):
+            place = material.sites[["latitude", "longitude"]].to_numpy()[:g][known]
+            between = great_circle_km(place[:, :1], place[:, 1:], place[:, 0], place[:, 1])
+            to_gauges = material.distance_to_serving(place[:, 0], place[:, 1])
+            covariance[at] = model.error_covariance(design[known], to_gauges, between)
+        else:
+            covariance[at] = generalized_skew_error_covariance(model, design[known])
+    np.fill_diagonal(covariance, np.nan_to_num(sites.mse[:g]))
+    return covariance
 
 
 def given_sites(study: StudyFiles, material: SkewMaterial, faults: FaultLog) -> SkewAtSites:

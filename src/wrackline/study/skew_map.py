@@ -83,7 +83,9 @@ def plan_grid(bounds: tuple[float, float, float, float], cell: float | None = No
         cell = min((size for size in CELL_SIZES if size >= wanted), default=CELL_SIZES[-1])
     first, last = np.floor(west / cell), np.ceil(east / cell)
     top, bottom = np.ceil(north / cell), np.floor(south / cell)
-    return Grid(first * cell, top * cell, cell, int(max(top - bottom, 1)), int(max(last - first, 1)))
+    # Rounded, so that the corner reads as it is meant: 0.05 times 2979 is not quite 148.95.
+    corner = float(np.round(first * cell, 9)), float(np.round(top * cell, 9))
+    return Grid(*corner, cell, int(max(top - bottom, 1)), int(max(last - first, 1)))
 
 
 def cells_within_reach(
