@@ -8,7 +8,8 @@ import pytest
 from wrackline.hydrology.growth_curves import Ratios, check_curve, choose_distribution, fit_curve
 from wrackline.hydrology.growth_intervals import tabulate_family
 from wrackline.hydrology.homogeneity import FitMeasures, Heterogeneity, fit_parent
-from wrackline.hydrology.pools import PoolSettings, analyse_pool, describe_heterogeneity
+from wrackline.hydrology.pool_verdicts import describe_heterogeneity
+from wrackline.hydrology.pools import PoolSettings, analyse_pool
 from wrackline.hydrology.records import PeakRecords, exact_records
 from wrackline.stats.distributions import BY_NAME
 
@@ -148,15 +149,28 @@ def test_short_and_constant_records_are_left_out_with_reasons():
     assert found.weight.sum() == pytest.approx(1)
 
 
-def test_zeros_stay_in_and_are_said():
+def test_years_without_flow_are_completed_by_a_law_above_them_and_said():
     records = made_records()
     flow = records.flow_low.copy()
-    flow[:2] = 0.0
+    flow[:8] = 0.0
+    found = analyse_pool(
+        replace(records, flow_low=flow, flow_high=flow), None, QUICK, np.random.default_rng(1)
+    )
+    n = np.diff(records.offsets)[0]
+    assert found.lmoments.n[0] == n - 8
+    assert found.completed == {"G00": f"8 of {n} years low or without flow"}
+    assert any(f"G00 (8 of {n}" in warning for warning in found.warnings)
+
+
+def test_a_few_years_without_flow_stay_in_as_they_are_and_are_said():
+    records = made_records()
+    flow = records.flow_low.copy()
+    flow[:1] = 0.0
     found = analyse_pool(
         replace(records, flow_low=flow, flow_high=flow), None, QUICK, np.random.default_rng(1)
     )
     assert found.lmoments.n[0] == np.diff(records.offsets)[0]
-    assert any("G00 (2)" in warning for warning in found.warnings)
+    assert any("G00 (1 of" in warning for warning in found.warnings)
 
 
 def test_a_pool_without_usable_gauges_is_refused():

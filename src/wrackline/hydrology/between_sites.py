@@ -100,7 +100,7 @@ def estimate_between_sites(
     where they do not: no data of this size can tell the two apart with certainty.
     """
     sampling = _sampling_covariance(years, simulated)
-    shared, vectors = np.linalg.eigh(_shared_sampling(years, correlation))
+    shared, vectors = np.linalg.eigh(shared_sampling(years, correlation))
     y = vectors.T @ np.column_stack([lcv, lskew])
     x = vectors.sum(axis=0)
 
@@ -126,7 +126,8 @@ def _sampling_covariance(years: Sequence[IntArray], simulated: SimulatedRatios) 
     return np.asarray((covariance * n).mean(axis=-1))
 
 
-def _shared_sampling(years: Sequence[IntArray], correlation: FloatArray | None) -> FloatArray:
+def shared_sampling(years: Sequence[IntArray], correlation: FloatArray | None) -> FloatArray:
+    """Return what gauges share of the sampling error of their ratios: ``n_ij rho_ij^2 / (n_i n_j)``, (g, g)."""
     numbers, n_years = number_years(years)
     n = np.array([len(held) for held in years])
     if correlation is None:

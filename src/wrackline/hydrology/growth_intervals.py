@@ -18,7 +18,7 @@ from wrackline.hydrology.growth_curves import (
     growth_factors,
 )
 from wrackline.hydrology.homogeneity import LARGEST_ACCEPTED_Z, FitMeasures, Parent, SimulatedRatios
-from wrackline.hydrology.records import FloatArray, IntArray
+from wrackline.hydrology.records import FloatArray
 from wrackline.stats import distributions
 from wrackline.stats.distributions import kappa
 
@@ -93,7 +93,7 @@ def tabulate_family(parent: Parent) -> LawFamily:
 
 def simulate_growth_errors(
     rng: np.random.Generator,
-    n: IntArray,
+    weights: tuple[FloatArray, FloatArray],
     ratios: Ratios,
     curve: GrowthCurve,
     choice: Choice,
@@ -105,14 +105,15 @@ def simulate_growth_errors(
     statistic: Statistic,
     confidence: float,
     rechoose: bool = True,
+    own: int | None = None,
 ) -> GrowthErrors:
     """Repeat the regional analysis on simulated regions and compare each with the truth of one more site.
 
     Parameters
     ----------
     rng : numpy.random.Generator
-    n : (g,)
-        Record lengths, the weights.
+    weights : two of (g,)
+        Of the averages of L-CV, and of the higher ratios.
     ratios : Ratios of the pool
     curve, choice, parent, fit : the analysis of the observed pool
     simulated : SimulatedRatios
@@ -123,6 +124,8 @@ def simulate_growth_errors(
     confidence : float
     rechoose : bool
         Choose the law anew in every simulated region, unless it is pinned or the pool is heterogeneous.
+    own : int or None
+        The member whose own curve is wanted; None: that of one more site.
 
     Notes
     -----
@@ -137,16 +140,17 @@ def simulate_growth_errors(
     second simulation and keeps a study's intervals to a fraction of a second per pool. True curves come from
     kappa laws with the second shape of the parent, so a wrong choice of law counts as error.
     """
-    family, weight, count = tabulate_family(parent), n / n.sum(), simulated.n_simulations
-    away2, away3 = between.draw_departures(rng, count, len(n) + 1)
+    family, (weight, weight_lskew), count = tabulate_family(parent), weights, simulated.n_simulations
+    at = -1 if own is None else own
+    away2, away3 = between.draw_departures(rng, count, len(weight) + 1)
     true2 = np.clip(ratios.lcv + away2, 0.1 * ratios.lcv, 0.95)
     true3 = np.clip(ratios.lskew + away3, family.lskew[0], min(0.9, family.lskew[-1]))
     away4 = family.lkurtosis_at(true3) - family.lkurtosis_at(np.array(ratios.lskew))
     sample = Ratios(
         (simulated.lcv + true2[:, :-1] - ratios.lcv) @ weight,
-        (simulated.lskew + true3[:, :-1] - ratios.lskew) @ weight,
-        (simulated.lkurtosis + away4[:, :-1]) @ weight,
-        simulated.l5 @ weight,
+        (simulated.lskew + true3[:, :-1] - ratios.lskew) @ weight_lskew,
+        (simulated.lkurtosis + away4[:, :-1]) @ weight_lskew,
+        simulated.l5 @ weight_lskew,
     )
     fixed = not rechoose or choice.pinned or choice.by_evidence not in fit.names
     laws = np.full(count, choice.distribution) if fixed else _choose_again(sample, fit)
@@ -155,7 +159,7 @@ def simulate_growth_errors(
         of = laws == law
         estimate[of] = growth_factors(str(law), Ratios(*(r[of] for r in sample)), aep, statistic)
 
-    at_new_site = _log(family.factors(true2[:, -1], true3[:, -1], aep, statistic))
+    at_new_site = _log(family.factors(true2[:, at], true3[:, at], aep, statistic))
     of_region = _log(family.factors(np.array([ratios.lcv]), np.array([ratios.lskew]), aep, statistic))
     done = np.isfinite(estimate).all(axis=1)
     error = _log(estimate[done]) - at_new_site[done]

@@ -125,6 +125,10 @@ class PresortedDraws:
                 self._kept[length, rank] = found
         return found
 
+    def more(self, n_simulations: int) -> PresortedDraws:
+        """Return draws for more simulations from the same seed, kept only as long as they are used."""
+        return PresortedDraws(self.seed, n_simulations, 0)
+
     def _draw(self, length: int, rank: int) -> FloatArray:
         stream = random_stream(self.seed, "presorted", f"{length}:{rank}")
         gaps = stream.standard_exponential((self.n_simulations, length))
@@ -253,12 +257,51 @@ def measure_heterogeneity(
     return Heterogeneity(observed, mean, sd, h, np.sqrt((1 + h**2 / 2) / s), s)
 
 
-def measure_fit(n: IntArray, lskew: float, lkurtosis: float, simulated: SimulatedRatios) -> FitMeasures:
+def h1_without_each(n: IntArray, lcv: FloatArray, simulated: SimulatedRatios) -> FloatArray:
+    """Return H1 of a pool without each of its gauges in turn, (g,), by the simulated regions of the whole pool.
+
+    Parameters
+    ----------
+    n, lcv : (g,)
+    simulated : SimulatedRatios of the same gauges
+
+    Notes
+    -----
+    The scatter without a gauge follows from sums over all gauges, so this costs no new simulation; the parent
+    law stays that of the whole pool. NaN where fewer than two gauges would be left.
+    """
+    if len(n) < 3:
+        return np.full(len(n), np.nan)
+    rest = n.sum() - n
+    # about the pool's own average, so that the difference of squares loses no digits
+    centre = float(lcv @ n / n.sum())
+
+    def scatter(values: FloatArray) -> FloatArray:
+        away = values - centre
+        first, second = away @ n, away**2 @ n
+        mean = (first[..., None] - n * away) / rest
+        return np.sqrt(np.maximum((second[..., None] - n * away**2) / rest - mean**2, 0.0))
+
+    v = scatter(simulated.lcv)
+    return np.asarray((scatter(lcv) - v.mean(axis=0)) / v.std(axis=0, ddof=1))
+
+
+def sampling_constants(parent: Parent, n: IntArray, draws: PresortedDraws) -> FloatArray:
+    """Return years times the sampling variance of a record's L-CV and L-skew, (2,), by simulation at the middle length."""
+    middle = int(np.sort(n)[len(n) // 2])
+    simulated = simulate_independent(np.array([middle]), parent, draws)
+    return middle * np.array([simulated.lcv.var(ddof=1), simulated.lskew.var(ddof=1)])
+
+
+def measure_fit(
+    n: IntArray | FloatArray, lskew: float, lkurtosis: float, simulated: SimulatedRatios
+) -> FitMeasures:
     """Measure how well each three-parameter law agrees with a pool's average L-kurtosis.
 
     Parameters
     ----------
     n : (g,)
+        Record lengths, or other weights of the averages.
     lskew, lkurtosis : float
         Regional averages.
     simulated : SimulatedRatios of the same gauges

@@ -6,7 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from wrackline.hydrology.between_sites import BetweenSites, estimate_between_sites
+from wrackline.hydrology.between_sites import BetweenSites, estimate_between_sites, shared_sampling
 from wrackline.hydrology.dependence import repair_correlation
 from wrackline.hydrology.discordancy import Discordancy, measure_discordancy
 from wrackline.hydrology.growth_curves import (
@@ -28,17 +28,22 @@ from wrackline.hydrology.homogeneity import (
     PresortedDraws,
     SimulatedRatios,
     fit_parent,
+    h1_without_each,
     measure_fit,
     measure_heterogeneity,
+    sampling_constants,
     simulate_concurrent,
     simulate_independent,
 )
-from wrackline.hydrology.records import FloatArray, IntArray, PeakRecords
+from wrackline.hydrology.pool_records import PoolRecords, take_records
+from wrackline.hydrology.pool_verdicts import SKEWED, describe_heterogeneity, warn_of_tests
+from wrackline.hydrology.pool_weights import weigh_members
+from wrackline.hydrology.records import FloatArray, PeakRecords
 from wrackline.stats import distributions
+from wrackline.stats.anderson_darling import AndersonDarlingTest, bootstrap_homogeneity
 from wrackline.stats.copula import factor_correlation
-from wrackline.stats.lmoments import SampleLMoments, average_ratios, sample_lmoments
+from wrackline.stats.lmoments import SampleLMoments
 
-FEW_GAUGES = 7
 SMALLEST_EIGENVALUE = 1e-6
 
 
@@ -54,6 +59,26 @@ class PoolSettings:
     growth_simulations: int = 1000
     minimum_peaks: int = 10
     rechoose: bool = True
+    anderson_darling_replicates: int = 500
+
+
+@dataclass(frozen=True)
+class Membership:
+    """How the gauges of a pool stand to the site that the pool is for.
+
+    Attributes
+    ----------
+    departure : (2, g)
+        Mean square difference of true L-CV and L-skew between each gauge and the site, in the order of the records.
+    own : str
+        The site's own gauge if it is a member; blank: the site is ungauged or left out.
+    after_selection : bool
+        Whether H had a say in who is a member.
+    """
+
+    departure: FloatArray | None = None
+    own: str = ""
+    after_selection: bool = False
 
 
 @dataclass(frozen=True)
@@ -67,8 +92,10 @@ class PoolAnalysis:
         Gauge to the reason why it is not in the averages.
     warnings : tuple of str
     lmoments : SampleLMoments, arrays (g,)
-    weight : (g,)
-        Sums to one.
+    weight, weight_lskew : (g,)
+        Of the averages of L-CV, and of L-skew and higher ratios; each sums to one.
+    h1_without : (g,)
+        H1 of the pool without each gauge, by the same simulated regions.
     ratios : Ratios of the pool
     correlated : Heterogeneity or None
         H with correlated simulated regions; None when no correlation was given.
@@ -81,12 +108,17 @@ class PoolAnalysis:
     left_out: dict[str, str]
     warnings: tuple[str, ...]
     lmoments: SampleLMoments
+    completed: dict[str, str]
     weight: FloatArray
+    weight_lskew: FloatArray
     ratios: Ratios
     discordancy: Discordancy
     parent: Parent
     heterogeneity: Heterogeneity
+    h1_without: FloatArray
     correlated: Heterogeneity | None
+    second_opinion: AndersonDarlingTest | None
+    after_selection: bool
     fit: FitMeasures
     fit_correlated: FitMeasures | None
     choice: Choice
@@ -108,7 +140,9 @@ class PoolAnalysis:
 
     @property
     def verdict(self) -> str:
-        return describe_heterogeneity(self.heterogeneity, self.correlated)
+        return describe_heterogeneity(
+            self.heterogeneity, self.correlated, self.second_opinion, self.after_selection
+        )
 
     @property
     def accepted(self) -> tuple[str, ...]:
@@ -123,32 +157,6 @@ class PoolAnalysis:
         return 1 / (2 * self.curve.density_at_median)
 
 
-def describe_heterogeneity(independent: Heterogeneity, correlated: Heterogeneity | None = None) -> str:
-    """Say in words what H1 means (Hosking and Wallis, 1997): guide values, not significance levels."""
-    h1, n_sim = float(independent.h[0]), independent.n_simulations
-    if not np.isfinite(h1):
-        return "not tested: one gauge alone"
-    if h1 < -2:
-        return "homogeneous; H1 below -2 points to strong intersite correlation, not to strong homogeneity"
-    words = _grade(h1)
-    near = [limit for limit in (1, 2) if abs(h1 - limit) <= 2 * independent.h_se[0]]
-    if near:
-        words += f"; H1 is within two simulation errors of {near[0]} ({n_sim} simulations)"
-    if correlated is not None and _grade(float(correlated.h[0])) != _grade(h1):
-        words += f"; {_grade(float(correlated.h[0]))} once intersite correlation is allowed for"
-    return words
-
-
-def _grade(h1: float) -> str:
-    return (
-        "acceptably homogeneous"
-        if h1 < 1
-        else "possibly heterogeneous"
-        if h1 < 2
-        else "definitely heterogeneous"
-    )
-
-
 def analyse_pool(
     records: PeakRecords,
     correlation: FloatArray | None,
@@ -156,6 +164,8 @@ def analyse_pool(
     rng: np.random.Generator,
     pinned: str | None = None,
     why: str = "",
+    draws: PresortedDraws | None = None,
+    membership: Membership | None = None,
 ) -> PoolAnalysis:
     """Analyse one pool of gauges: averages, discordancy, heterogeneity, fit, growth curve and its errors.
 
@@ -170,38 +180,39 @@ def analyse_pool(
         The pool's own stream. The order of gauges does not matter, only the set of them.
     pinned, why : str
         A law fixed by the analyst and the written reason.
+    draws : PresortedDraws or None
+        Draws that pools share, so that their H can be compared; None takes the pool's own.
+    membership : Membership or None
+        None: a fixed pool, averages weighted by record length.
 
     Raises
     ------
     ValueError
         When no gauge has enough peaks.
     """
-    kept, order, left_out = _select_gauges(records, settings.minimum_peaks)
-    if not order.size:
+    membership = membership or Membership()
+    taken = take_records(records, settings.minimum_peaks)
+    if not taken.order.size:
         raise ValueError(f"no gauge has {settings.minimum_peaks} exactly known peaks that differ")
-    warnings = _warn_of_zeros(kept)
-    lm = sample_lmoments(kept.flow_low, kept.offsets)
-    n, weight = lm.n, lm.n / lm.n.sum()
-    average = average_ratios(lm, n)
-    ratios = Ratios(*(float(ratio) for ratio in (average.t, average.t3, average.t4, average.t5)))
+    kept, lm, n = taken.records, taken.lmoments, taken.lmoments.n
     years = np.split(kept.water_year, kept.offsets[1:-1])
-    matrix = None if correlation is None else correlation[np.ix_(order, order)]
-    if matrix is not None:
-        given, (matrix, repaired) = matrix, repair_correlation(matrix, SMALLEST_EIGENVALUE)
-        if repaired:
-            warnings.append(
-                "the correlation matrix was not positive definite and was repaired; no correlation changed by more "
-                f"than {np.abs(matrix - given).max():.2g}"
-            )
+    matrix, warnings = _correlate(correlation, taken)
+    warnings = _tell_completed(taken) + warnings
+    draws = draws or PresortedDraws(int(rng.integers(2**62)), settings.simulations)
+    weight, weight_lskew = _weigh(taken, matrix, membership, draws)
+    ratios = _average(lm, weight, weight_lskew)
 
     parent = fit_parent(*ratios[:3])
-    heterogeneity, fit, independent = _test_pool(lm, ratios, parent, settings, int(rng.integers(2**62)))
+    heterogeneity, fit, independent = _test_pool(lm, ratios, parent, settings, draws, weight_lskew)
+    h1_without = h1_without_each(n, lm.t, independent)
     correlated, fit_correlated, growth_draws = None, None, independent
     if matrix is not None:
         wanted = max(settings.simulations, settings.growth_simulations)
         growth_draws = simulate_concurrent(rng, years, factor_correlation(matrix), parent, wanted)
         correlated = measure_heterogeneity(n, lm.t, lm.t3, lm.t4, _first(growth_draws, settings.simulations))
-        fit_correlated = measure_fit(n, ratios[1], ratios[2], _first(growth_draws, settings.simulations))
+        fit_correlated = measure_fit(
+            weight_lskew, ratios[1], ratios[2], _first(growth_draws, settings.simulations)
+        )
     growth_draws = _first(growth_draws, settings.growth_simulations)
     between = estimate_between_sites(lm.t, lm.t3, ratios[0], years, matrix, growth_draws)
 
@@ -209,22 +220,27 @@ def analyse_pool(
     choice = choose_distribution(fit, float(heterogeneity.h[0]), pinned, why)
     curve = fit_curve(choice.distribution, ratios, settings.statistic)
     growth = simulate_growth_errors(
-        rng, n, ratios, curve, choice, parent, fit, growth_draws, between, aep,
-        settings.statistic, settings.confidence, settings.rechoose,
+        rng, (weight, weight_lskew), ratios, curve, choice, parent, fit, growth_draws, between, aep,
+        settings.statistic, settings.confidence, settings.rechoose, _number_of(membership.own, kept.gauge_ids),
     )  # fmt: skip
     largest = largest_scaled_flood(kept.flow_low, kept.offsets, settings.statistic)
-    warnings += _warn_of_tests(heterogeneity, choice, parent, len(n)) + check_curve(curve, aep, largest)
+    warnings += warn_of_tests(heterogeneity, choice, parent, len(n)) + check_curve(curve, aep, largest)
     return PoolAnalysis(
         gauge_ids=kept.gauge_ids,
-        left_out=left_out,
+        left_out=taken.left_out,
         warnings=tuple(warnings),
         lmoments=lm,
+        completed=taken.completed,
         weight=weight,
+        weight_lskew=weight_lskew,
         ratios=ratios,
         discordancy=measure_discordancy(lm.t, lm.t3, lm.t4),
         parent=parent,
         heterogeneity=heterogeneity,
+        h1_without=h1_without,
         correlated=correlated,
+        second_opinion=_second_opinion(kept, ratios, settings, rng),
+        after_selection=membership.after_selection,
         fit=fit,
         fit_correlated=fit_correlated,
         choice=choice,
@@ -238,41 +254,76 @@ def analyse_pool(
     )
 
 
-def _select_gauges(records: PeakRecords, minimum_peaks: int) -> tuple[PeakRecords, IntArray, dict[str, str]]:
-    """Keep exact systematic peaks of gauges with enough of them, in order of identifier."""
-    exact = records.keep_rows(records.systematic_exact)
-    order = np.array(sorted(range(exact.n_gauges), key=exact.gauge_ids.__getitem__), dtype=np.int64)
-    used, left_out = [], {}
-    for i in order:
-        flow = exact.flow_low[exact.offsets[i] : exact.offsets[i + 1]]
-        if len(flow) < minimum_peaks:
-            left_out[exact.gauge_ids[i]] = (
-                f"{len(flow)} exactly known systematic peaks, fewer than {minimum_peaks}"
-            )
-        elif flow.min() == flow.max():
-            left_out[exact.gauge_ids[i]] = "all peaks are equal"
-        else:
-            used.append(i)
-    chosen = np.array(used, dtype=np.int64)
-    return exact.keep_gauges(chosen), chosen, left_out
+def _correlate(correlation: FloatArray | None, taken: PoolRecords) -> tuple[FloatArray | None, list[str]]:
+    """Correlation of the gauges used, positive definite, with a word on what was repaired."""
+    if correlation is None:
+        return None, []
+    given = correlation[np.ix_(taken.order, taken.order)]
+    matrix, repaired = repair_correlation(given, SMALLEST_EIGENVALUE)
+    if not repaired:
+        return matrix, []
+    change = np.abs(matrix - given).max()
+    return matrix, [
+        "the correlation matrix was not positive definite and was repaired; no correlation changed by more "
+        f"than {change:.2g}"
+    ]
+
+
+def _weigh(
+    taken: PoolRecords, matrix: FloatArray | None, membership: Membership, draws: PresortedDraws
+) -> tuple[FloatArray, FloatArray]:
+    """Weights of L-CV and of the higher ratios: record lengths, or least error for the pool's site."""
+    lm = taken.lmoments
+    by_length = lm.n / lm.n.sum()
+    if membership.departure is None:
+        return by_length, by_length
+    departure = membership.departure[:, taken.order]
+    sampling = sampling_constants(fit_parent(*_average(lm, by_length, by_length)[:3]), lm.n, draws)
+    years = np.split(taken.records.water_year, taken.records.offsets[1:-1])
+    shared = shared_sampling(years, matrix)
+    first, second = (weigh_members(departure[i], lm.n, sampling[i], shared) for i in range(2))
+    return first, second
+
+
+def _average(lm: SampleLMoments, weight: FloatArray, weight_lskew: FloatArray) -> Ratios:
+    return Ratios(float(weight @ lm.t), *(float(weight_lskew @ ratio) for ratio in (lm.t3, lm.t4, lm.t5)))
+
+
+def _number_of(own: str, gauge_ids: tuple[str, ...]) -> int | None:
+    return gauge_ids.index(own) if own in gauge_ids else None
+
+
+def _second_opinion(
+    kept: PeakRecords, ratios: Ratios, settings: PoolSettings, rng: np.random.Generator
+) -> AndersonDarlingTest | None:
+    """The test without a parent law, where floods are so skewed that H1 loses power."""
+    if ratios.lskew <= SKEWED or kept.n_gauges < 2:
+        return None
+    return bootstrap_homogeneity(
+        kept.flow_low, kept.offsets, rng, settings.anderson_darling_replicates, settings.statistic
+    )
 
 
 def _test_pool(
-    lm: SampleLMoments, ratios: Ratios, parent: Parent, settings: PoolSettings, seed: int
+    lm: SampleLMoments,
+    ratios: Ratios,
+    parent: Parent,
+    settings: PoolSettings,
+    draws: PresortedDraws,
+    weight_lskew: FloatArray,
 ) -> tuple[Heterogeneity, FitMeasures, SimulatedRatios]:
     """Run the tests with independent gauges; a close call on H1 is decided with more simulations."""
-    n_simulations = settings.simulations
-    draws = simulate_independent(lm.n, parent, PresortedDraws(seed, n_simulations))
-    heterogeneity = measure_heterogeneity(lm.n, lm.t, lm.t3, lm.t4, draws)
+    simulated = simulate_independent(lm.n, parent, draws)
+    heterogeneity = measure_heterogeneity(lm.n, lm.t, lm.t3, lm.t4, simulated)
     h1, se = heterogeneity.h[0], heterogeneity.h_se[0]
     close = bool(min(abs(h1 - 1), abs(h1 - 2)) <= 2 * se)
-    more = draws
-    if close and settings.close_call_simulations > n_simulations:
-        more = simulate_independent(lm.n, parent, PresortedDraws(seed, settings.close_call_simulations, 0))
+    more = simulated
+    if close and settings.close_call_simulations > draws.n_simulations:
+        more = simulate_independent(lm.n, parent, draws.more(settings.close_call_simulations))
         heterogeneity = measure_heterogeneity(lm.n, lm.t, lm.t3, lm.t4, more)
-    if settings.growth_simulations > draws.n_simulations:
-        draws = simulate_independent(lm.n, parent, PresortedDraws(seed, settings.growth_simulations, 0))
-    return heterogeneity, measure_fit(lm.n, ratios[1], ratios[2], more), draws
+    if settings.growth_simulations > simulated.n_simulations:
+        simulated = simulate_independent(lm.n, parent, draws.more(settings.growth_simulations))
+    return heterogeneity, measure_fit(weight_lskew, ratios[1], ratios[2], more), simulated
 
 
 def _first(simulated: SimulatedRatios, count: int) -> SimulatedRatios:
@@ -287,35 +338,11 @@ def _all_curves(ratios: Ratios, aep: FloatArray, statistic: Statistic) -> dict[s
     return {name: factor for name, factor in curves.items() if np.isfinite(factor).all()}
 
 
-def _warn_of_zeros(records: PeakRecords) -> list[str]:
-    zero = np.bincount(records.gauge_index[records.flow_low <= 0], minlength=records.n_gauges)
-    if not zero.any():
+def _tell_completed(taken: PoolRecords) -> list[str]:
+    if not taken.completed:
         return []
-    listed = ", ".join(f"{records.gauge_ids[i]} ({zero[i]})" for i in np.flatnonzero(zero))
+    listed = ", ".join(f"{gauge} ({what})" for gauge, what in taken.completed.items())
     return [
-        f"peaks of zero are in the L-moments as they are: {listed}; ratios of records with many zeros do not "
-        "compare with those of others"
+        "records with low years, or years without flow (a law fitted to the floods above stands in for them, unless they "
+        f"are few): {listed}"
     ]
-
-
-def _warn_of_tests(heterogeneity: Heterogeneity, choice: Choice, parent: Parent, n_gauges: int) -> list[str]:
-    warnings, h1 = [], heterogeneity.h[0]
-    if h1 >= 2:
-        warnings.append(
-            f"the pool is definitely heterogeneous (H1 = {h1:.2f}); form other pools or read the interval as wide"
-        )
-    if h1 < -2:
-        warnings.append(f"H1 = {h1:.2f} is below -2, which points to strong intersite correlation")
-    if n_gauges < FEW_GAUGES:
-        warnings.append(
-            f"the pool has {n_gauges} gauge{'s' * (n_gauges > 1)}; heterogeneity tests are weak below {FEW_GAUGES}"
-        )
-    if parent.name == "GLO":
-        warnings.append(
-            "no kappa law has the pool's L-kurtosis; regions were simulated from the generalized logistic law"
-        )
-    if choice.pinned and choice.distribution != choice.by_evidence:
-        warnings.append(
-            f"the analyst fixed {choice.distribution}; the tests would now choose {choice.by_evidence}"
-        )
-    return warnings
