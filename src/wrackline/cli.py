@@ -14,6 +14,7 @@ from rich.text import Text
 
 from wrackline.estimate_command import estimate
 from wrackline.fit_command import fit
+from wrackline.freeze_command import freeze_study, verify_edition
 from wrackline.import_command import import_files
 from wrackline.study.faults import Fault, StudyFaults
 from wrackline.study.loading import UnreadableStudy
@@ -34,17 +35,23 @@ def _several_commands() -> None:
 
 @app.command()
 def check(
-    study: Annotated[Path, typer.Argument(metavar="FOLDER/study.yaml", help="The study file.")],
+    study: Annotated[
+        Path, typer.Argument(metavar="FOLDER/study.yaml", help="The study file, or the folder of an edition.")
+    ],
 ) -> None:
-    """Read all inputs of a study and print every problem; writes nothing.
+    """Read all inputs of a study and print every problem, or verify a frozen edition; writes nothing.
 
     Every problem is told with its file, row (as a spreadsheet numbers it), column, value and mend.
     Flows and areas are in the units that the study declares.
+
+    An edition is compared with the digests that were taken when it was frozen.
 
     Exit status: 0 clean (warnings allowed), 1 problems, 2 the study file cannot be read.
 
     Example: wrackline check my_region/study.yaml
     """
+    if (study / "edition.json").is_file():
+        raise typer.Exit(verify_edition(study))
     from wrackline.study.checking import check as check_study
 
     found = check_study(study)
@@ -77,6 +84,7 @@ def new(folder: Annotated[Path, typer.Argument(metavar="FOLDER", help="The folde
 app.command()(fit)
 app.command()(estimate)
 app.command("import")(import_files)
+app.command("freeze")(freeze_study)
 
 
 def print_faults(

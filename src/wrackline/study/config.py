@@ -303,6 +303,15 @@ class Regression(_Part):
     adopt: tuple[AdoptedRoute, ...] = Field((), description="Routes that the analyst adopts, with reasons; otherwise the evidence decides.")
 
 
+class Editions(_Part):
+    """Finished runs kept under a name (`wrackline freeze`), and the one that a new run is compared with."""
+
+    folder: str = Field("editions", description="Folder of the editions, relative to the study file.")
+    previous: str = Field(
+        "", description="Name of the edition that the run is compared with; blank: the run is compared with none."
+    )
+
+
 class StudyConfig(_Part):
     """A whole study's configuration."""
 
@@ -327,6 +336,7 @@ class StudyConfig(_Part):
     pooling: Pooling = Field(default_factory=Pooling, description=Pooling.__doc__ or "")
     index_flood: IndexFlood = Field(default_factory=IndexFlood, description=IndexFlood.__doc__ or "")
     regression: Regression = Field(default_factory=Regression, description=Regression.__doc__ or "")
+    editions: Editions = Field(default_factory=Editions, description=Editions.__doc__ or "")
 
     @model_validator(mode="after")
     def _attributes_exist(self) -> StudyConfig:

@@ -125,31 +125,37 @@ def digest_sources(root: Path = Path(__file__).parents[1]) -> str:
 def digest_inputs(config: StudyConfig, study_file: Path) -> dict[str, dict[str, str]]:
     """Digest the study file and every input that the configuration names, under those names."""
     log = FaultLog()
-    found = {study_file.name: {"sha256": digest_file(study_file)}}
-    for key, name in config.inputs.model_dump().items():
-        if not name:
+    keys = {name: f"inputs.{key}" for key, name in config.inputs.model_dump().items()}
+    found = {}
+    for name, path in input_files(config, study_file).items():
+        if path.is_file():
+            found[name] = {"sha256": digest_file(path)}
             continue
-        path = study_file.parent / name
-        if not path.is_file():
-            log.problem(
-                "missing_input",
-                study_file.name,
-                "the file is not there.",
-                "Put it there, or leave the entry blank.",
-                column=f"inputs.{key}",
-                value=name,
-            )
-            continue
-        found[name] = {"sha256": digest_file(path)}
+        log.problem(
+            "missing_input",
+            study_file.name,
+            "the file is not there.",
+            "Put it there, or leave the entry blank.",
+            column=keys.get(name, "skew.given_map"),
+            value=name,
+        )
     log.stop_on_problems()
     return found
+
+
+def input_files(config: StudyConfig, study_file: Path) -> dict[str, Path]:
+    """List the study file and all files that its configuration names, by those names."""
+    names = [study_file.name, *(name for name in config.inputs.model_dump().values() if name)]
+    if config.skew.source == "map":
+        names.append(config.skew.given_map)
+    return {name: study_file.parent / name for name in names}
 
 
 def digest_outputs(results: Path) -> dict[str, dict[str, str]]:
     """Digest every file below ``results`` but the manifest, under its path there."""
     files = sorted(path for path in results.rglob("*") if path.is_file())
     names = {path.relative_to(results).as_posix(): path for path in files}
-    return {name: _describe(path) for name, path in sorted(names.items()) if name != MANIFEST}
+    return {name: describe_file(path) for name, path in sorted(names.items()) if name != MANIFEST}
 
 
 def written_files(manifest: Path) -> list[PurePosixPath]:
@@ -201,8 +207,9 @@ def digest_geopackage(path: Path) -> str:
     return digest.hexdigest()
 
 
-def _describe(path: Path) -> dict[str, str]:
-    if path.suffix.lower() == ".gpkg":
+def describe_file(path: Path, *, by_bytes: bool = False) -> dict[str, str]:
+    """Digest a file as the manifest does: a result by content where a format's bytes vary, an input by its bytes."""
+    if path.suffix.lower() == ".gpkg" and not by_bytes:
         return {"content_sha256": digest_geopackage(path)}
     return {"sha256": digest_file(path)}
 
