@@ -10,6 +10,7 @@ rule estimate:
         station="work/atsite/moments.csv",
         skew="work/skew/sites.csv",
         skew_errors="work/skew/error_covariance.npy",
+        record_estimates="work/weight/contribution.json",
         growth="work/pool/growth.json",
         equations="work/regress/tables/equations.json",
         routes="work/validate/routes.json",

@@ -38,6 +38,7 @@ def run(study: StudyFiles) -> str:
     at_gauges = estimate_gauges(
         config, gauges.gauge_ids, read_gauge_floods(study, gauges), regional, routes["adopted"]
     )
+    records = read_table(study.work("weight") / "tables" / "record_estimates.csv", text=("source",))
     adopt = adopted_routes(config, ledger, set(targets["target_id"]), faults)
     models = describe_models(
         config, equations, growth, routes, _describe_gauges(gauges, at_gauges, regional), adopt
@@ -58,9 +59,7 @@ def run(study: StudyFiles) -> str:
             stage="estimate",
             tables=(
                 Table("target_estimates", table, TARGET_COLUMNS),
-                Table(
-                    "gauge_estimates", gauge_table(config, at_gauges, _record_estimates(study)), GAUGE_COLUMNS
-                ),
+                Table("gauge_estimates", gauge_table(config, at_gauges, records), GAUGE_COLUMNS),
             ),
             sections=tuple(sections),
             warnings=(*faults.warnings, *target_warnings(table)),
@@ -68,12 +67,6 @@ def run(study: StudyFiles) -> str:
         ),
     )
     return f"{len(gauges.gauge_ids)} gauges and {len(targets)} targets; adopted {_count_routes(table)}"
-
-
-def _record_estimates(study: StudyFiles) -> pd.DataFrame | None:
-    """Estimates at gauges from the records alone, where the stage `weight` has made them."""
-    path = study.work("weight") / "gauge_estimates.csv"
-    return read_table(path, text=("source",)) if path.is_file() else None
 
 
 def _read_json(study: StudyFiles, place: str) -> dict[str, Any]:

@@ -123,21 +123,22 @@ def _interval(
     return log10_flow, log10_flow - reach * se, log10_flow + reach * se, se
 
 
-def gauge_table(
-    config: StudyConfig, estimates: GaugeEstimates, records: pd.DataFrame | None = None
-) -> pd.DataFrame:
+def gauge_table(config: StudyConfig, estimates: GaugeEstimates, records: pd.DataFrame) -> pd.DataFrame:
     """A row per gauge, probability and source that has an estimate.
 
-    ``records``: rows of the sources station and weighted_skew for all gauges with a natural record, where an earlier
-    stage has made them; otherwise they are those of the regional analysis.
+    ``records``: rows of the sources station and weighted_skew for all gauges with a natural record, as the stage
+    `weight` made them.
     """
     shown = np.isin(estimates.aeps, config.aeps.gauges)
-    own = SOURCES if records is None else SOURCES[2:]
-    frames = [_source_rows(config, estimates, name, shown) for name in own]
-    if records is not None:
-        taken = {g for g, source in zip(estimates.gauge_ids, estimates.adopted, strict=True) if source in own}
-        adopted = records["adopted"].to_numpy(dtype=bool) & ~records["gauge_id"].isin(taken).to_numpy()
-        frames.insert(0, records[[column.name for column in GAUGE_COLUMNS]].assign(adopted=adopted))
+    regional = SOURCES[2:]
+    names = [column.name for column in GAUGE_COLUMNS if column.name != "adopted"]
+    source_of = dict(zip(estimates.gauge_ids, estimates.adopted, strict=True))
+    adopted = [
+        source == source_of.get(gauge, "")
+        for gauge, source in zip(records["gauge_id"], records["source"], strict=True)
+    ]
+    frames = [records[names].assign(adopted=np.array(adopted, dtype=bool))]
+    frames += [_source_rows(config, estimates, name, shown) for name in regional]
     frame = pd.concat(frames, ignore_index=True)
     order = frame["source"].map({name: i for i, name in enumerate(SOURCES)})
     return (
