@@ -187,6 +187,8 @@ def _effect(
 
 
 def _warn(weighted: Weighted, faults: FaultLog) -> None:
+    if not np.isfinite(weighted.skew).any():
+        return
     for i in np.flatnonzero(weighted.used):
         for warning in weighted.fits.warnings[i]:
             if warning.code in OWN_CODES:
