@@ -192,7 +192,6 @@ def write_skew_tif(path: Path, grid: Grid, skew: FloatArray, mse: FloatArray) ->
     """
     import rasterio
     from rasterio.io import MemoryFile
-    from rasterio.transform import from_origin
 
     profile: dict[str, Any] = {
         "driver": "GTiff",
@@ -201,7 +200,7 @@ def write_skew_tif(path: Path, grid: Grid, skew: FloatArray, mse: FloatArray) ->
         "count": 2,
         "dtype": "float32",
         "crs": rasterio.crs.CRS.from_epsg(4326),
-        "transform": from_origin(grid.west, grid.north, grid.cell, grid.cell),
+        "transform": rasterio.Affine(grid.cell, 0.0, grid.west, 0.0, -grid.cell, grid.north),
         "nodata": NO_DATA,
         "compress": "deflate",
     }
@@ -233,8 +232,10 @@ def sample_skew_tif(path: Path, latitude: FloatArray, longitude: FloatArray) -> 
             raise ValueError("it has no coordinate system")
         x, y = transform("EPSG:4326", tif.crs, list(longitude), list(latitude))
         bands = tif.read([1, 2], masked=True).astype(float).filled(np.nan)
-        row, column = rasterio.transform.rowcol(tif.transform, x, y)
-    row, column = np.asarray(row, dtype=np.int64), np.asarray(column, dtype=np.int64)
+        a, b, c, d, e, f = tif.transform[:6]
+    across, down = np.asarray(x, dtype=float) - c, np.asarray(y, dtype=float) - f
+    column = np.floor((e * across - b * down) / (a * e - b * d)).astype(np.int64)
+    row = np.floor((a * down - d * across) / (a * e - b * d)).astype(np.int64)
     inside = (row >= 0) & (row < bands.shape[1]) & (column >= 0) & (column < bands.shape[2])
     values = np.full((2, len(row)), np.nan)
     values[:, inside] = bands[:, row[inside], column[inside]]
