@@ -59,7 +59,7 @@ def test_snakemake_alone_finds_snakefile_and_profile_from_the_repositorys_root(
         capture_output=True,
         text=True,
     )
-    assert "workflow/profiles/default" in run.stderr
+    assert "profiles/default" in run.stderr
     assert "value 'buckets'" in run.stderr
     assert run.returncode == 1
 

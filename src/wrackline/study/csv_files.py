@@ -102,8 +102,11 @@ def _stripped(column: tuple[str, ...]) -> TextArray:
 
 
 def is_readable(path: Path, file: str, log: FaultLog) -> bool:
-    """Report a file that is not there or cannot be opened."""
+    """Report a file that is not there or cannot be opened; pipes and devices, which may never end, are not."""
     try:
+        if path.exists() and not (path.is_file() or path.is_dir()):
+            log.problem("unreadable_file", file, "This is a pipe or a device, not a file.")
+            return False
         with path.open("rb"):
             return True
     except FileNotFoundError:

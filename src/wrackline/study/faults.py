@@ -2,11 +2,14 @@
 
 from __future__ import annotations
 
+import unicodedata
 from collections.abc import Iterable
 from dataclasses import asdict, dataclass, field
 from typing import Any, Literal
 
 Severity = Literal["problem", "warning"]
+LONGEST_VALUE, LONGEST_TEXT = 200, 600
+"""Characters of a value, and of the sentences about it, that a fault shows."""
 
 
 @dataclass(frozen=True)
@@ -62,10 +65,17 @@ class FaultLog:
     faults: list[Fault] = field(default_factory=list)
 
     def problem(self, code: str, file: str, problem: str, mend: str = "", **place: Any) -> None:
-        self.faults.append(Fault(code, "problem", file, problem, mend, **_as_text(place)))
+        self._add("problem", code, file, problem, mend, place)
 
     def warning(self, code: str, file: str, problem: str, mend: str = "", **place: Any) -> None:
-        self.faults.append(Fault(code, "warning", file, problem, mend, **_as_text(place)))
+        self._add("warning", code, file, problem, mend, place)
+
+    def _add(
+        self, severity: Severity, code: str, file: str, problem: str, mend: str, place: dict[str, Any]
+    ) -> None:
+        """Keep a fault; its texts may hold what a stranger wrote into a file."""
+        file, problem, mend = (_on_one_line(text, LONGEST_TEXT) for text in (file, problem, mend))
+        self.faults.append(Fault(code, severity, file, problem, mend, **_as_text(place)))
 
     @property
     def problems(self) -> list[Fault]:
@@ -100,5 +110,14 @@ def _as_text(place: dict[str, Any]) -> dict[str, Any]:
         place["row"] = int(place["row"])
     for key in ("column", "value"):
         if place.get(key) is not None:
-            place[key] = str(place[key])
+            place[key] = _on_one_line(str(place[key]), LONGEST_VALUE)
     return place
+
+
+def _on_one_line(text: str, longest: int) -> str:
+    """Shorten a text, and write out what is not seen or would act on a terminal (``\\n``, ``\\x1b``)."""
+    if len(text) > longest:
+        text = f"{text[: longest - 30]} ... ({len(text):,} characters)"
+    if text.isprintable():
+        return text
+    return "".join(c if c.isprintable() or unicodedata.category(c) == "Zs" else ascii(c)[1:-1] for c in text)

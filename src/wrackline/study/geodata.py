@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import warnings
 from collections.abc import Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -33,20 +34,10 @@ def read_polygons(path: Path, file: str, layer: str, column: str, log: FaultLog)
     if not is_readable(path, file, log):
         return None
     import geopandas
-    import pyogrio
 
-    try:
-        layers = [str(name) for name, _ in pyogrio.list_layers(path)]
-    except pyogrio.errors.DataSourceError:
-        log.problem(
-            "not_geodata", file, "The file cannot be read as geodata.", "Save the polygons as GeoPackage."
-        )
+    frame = _read_layer(path, file, layer, log)
+    if frame is None:
         return None
-    if layer not in layers:
-        problem = f"There is no layer '{layer}'; the file has {', '.join(layers) or 'none'}."
-        log.problem("unknown_layer", file, problem, f"Name the layer of polygons '{layer}'.", value=layer)
-        return None
-    frame = geopandas.read_file(path, layer=layer)
     if column not in frame:
         near = nearest_word(column, [str(name) for name in frame.columns])
         mend = f"Is it '{near}'? Then rename that." if near else "Add it."
@@ -61,6 +52,33 @@ def read_polygons(path: Path, file: str, layer: str, column: str, log: FaultLog)
     good = _shapes_are_fair(frame, file, column, log)
     frame = frame[good].to_crs(4326)
     return frame.sort_values(column, kind="stable").reset_index(drop=True)
+
+
+def _read_layer(path: Path, file: str, layer: str, log: FaultLog) -> GeoDataFrame | None:
+    """Read a layer as it is; what the library remarks on the file becomes a warning of the study."""
+    import geopandas
+    import pyogrio
+    from pyogrio.errors import DataLayerError, DataSourceError, FeatureError, GeometryError
+
+    with warnings.catch_warnings(record=True) as remarks:
+        warnings.simplefilter("always")
+        try:
+            layers = [str(name) for name, _ in pyogrio.list_layers(path)]
+            frame = geopandas.read_file(path, layer=layer) if layer in layers else None
+        except (DataSourceError, DataLayerError, FeatureError, GeometryError, ValueError):
+            log.problem(
+                "not_geodata", file, "The file cannot be read as geodata.", "Save the polygons as GeoPackage."
+            )
+            return None
+    for remark in sorted({str(remark.message).replace(str(path), file) for remark in remarks}):
+        log.warning("odd_geodata", file, f"The file was read with a remark: {remark.rstrip('.')}.")
+    if frame is None:
+        problem = f"There is no layer '{layer}'; the file has {', '.join(layers) or 'none'}."
+        log.problem("unknown_layer", file, problem, f"Name the layer of polygons '{layer}'.", value=layer)
+    elif not isinstance(frame, geopandas.GeoDataFrame):
+        log.problem("no_shapes", file, f"Layer '{layer}' holds no shapes.", "Save the polygons with it.")
+        return None
+    return frame
 
 
 def _shapes_are_fair(frame: GeoDataFrame, file: str, column: str, log: FaultLog) -> np.ndarray:

@@ -116,6 +116,7 @@ class _Reading:
             "ledger", lambda sheet: read_ledger(sheet, standing, config.flow_in_m3s, log), empty_ledger
         )
         self._check_names_in_configuration(gauge_ids)
+        self._check_output()
         built = None
         if (
             gauge_ids is not None
@@ -279,6 +280,32 @@ class _Reading:
                     column=f"pooling.moves.{number}.gauge_id",
                     value=move.gauge_id,
                 )
+
+    def _check_output(self) -> None:
+        """Results lie in a folder of their own: what a run publishes there takes the place of an earlier run's."""
+        folder, results = self.folder.resolve(), (self.folder / self.config.output).resolve()
+        try:
+            is_file = results.exists() and not results.is_dir()
+        except OSError as error:
+            problem = f"The folder for the results cannot be made: {error.strerror}."
+        else:
+            if is_file:
+                problem = "The folder for the results is a file."
+            elif folder.is_relative_to(results):
+                problem = "The results need a folder of their own, not the study's or one that holds it."
+            elif results.is_relative_to(folder / "work"):
+                problem = "The folder `work` is for intermediates, which may be deleted at any time."
+            else:
+                return
+        self.log.problem(
+            "bad_output",
+            self.study_file.name,
+            problem,
+            "Name a folder such as `results`.",
+            row=line_of(self.study_file, ("output",)),
+            column="output",
+            value=self.config.output,
+        )
 
     def _check_enough(self, built: BuiltRecords, peaks: Peaks, ledger: Ledger) -> None:
         records, log = built.records, self.log

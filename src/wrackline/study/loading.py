@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import unicodedata
 from pathlib import Path
 from typing import Any
 
@@ -13,6 +14,9 @@ from wrackline.study.faults import FaultLog, StudyFaults
 from wrackline.study.vocabulary import did_you_mean
 
 Place = tuple[str | int, ...]
+DEEPEST = 20
+"""Levels of a study file; the deepest key of the configuration stands on the fourth."""
+TOO_DEEP = "brackets or indentation are nested far deeper than any study needs"
 
 
 class UnreadableStudy(StudyFaults):
@@ -20,7 +24,35 @@ class UnreadableStudy(StudyFaults):
 
 
 class _StudyLoader(yaml.SafeLoader):
-    """Safe YAML that leaves dates as text."""
+    """Safe YAML that leaves dates as text, takes no aliases, and tells every odd value with its line.
+
+    Aliases can stand for endless or gigantic content in a few lines, and a study file needs none.
+    """
+
+    def compose_node(self, parent: yaml.Node | None, index: int) -> yaml.Node | None:
+        if self.check_event(yaml.AliasEvent):
+            raise yaml.MarkedYAMLError(
+                problem="an alias (`*name`) stands here; write its content out",
+                problem_mark=self.peek_event().start_mark,
+            )
+        node: yaml.Node | None = super().compose_node(parent, index)
+        return node
+
+    def construct_object(self, node: yaml.Node, deep: bool = False) -> Any:
+        try:
+            value = super().construct_object(node, deep)
+        except (ValueError, TypeError, LookupError, AttributeError):
+            kind = node.tag.rpartition(":")[2]
+            raise yaml.MarkedYAMLError(
+                problem=f"the value cannot be read as {kind}", problem_mark=node.start_mark
+            ) from None
+        if isinstance(value, str) and any(
+            unicodedata.category(c) in ("Cc", "Cs") for c in value if c not in "\n\t"
+        ):
+            raise yaml.MarkedYAMLError(
+                problem="the text holds a control character", problem_mark=node.start_mark
+            )
+        return value
 
 
 _StudyLoader.yaml_implicit_resolvers = {
@@ -106,9 +138,13 @@ def _read_text(study_file: Path, shown: str) -> str:
 
 def _compose(text: str, shown: str) -> yaml.Node | None:
     try:
-        return yaml.compose(text, Loader=_StudyLoader)
+        node = yaml.compose(text, Loader=_StudyLoader)
+        _refuse_depth(node)
+        return node
     except yaml.MarkedYAMLError as error:
         raise _yaml_fault(error, shown) from None
+    except RecursionError:
+        raise _yaml_fault(yaml.MarkedYAMLError(problem=TOO_DEEP), shown) from None
     except yaml.reader.ReaderError as error:
         log = FaultLog()
         log.problem(
@@ -117,6 +153,20 @@ def _compose(text: str, shown: str) -> yaml.Node | None:
             f"The study file holds a character that YAML does not allow: {error.reason}.",
         )
         raise UnreadableStudy(log.problems) from None
+
+
+def _refuse_depth(node: yaml.Node | None) -> None:
+    level = [node] if node is not None else []
+    for _ in range(DEEPEST):
+        level = [below for above in level for below in _children(above)]
+    if level:
+        raise yaml.MarkedYAMLError(problem=TOO_DEEP, problem_mark=level[0].start_mark)
+
+
+def _children(node: yaml.Node) -> list[yaml.Node]:
+    if isinstance(node, yaml.MappingNode):
+        return [part for pair in node.value for part in pair]
+    return list(node.value) if isinstance(node, yaml.SequenceNode) else []
 
 
 def _yaml_fault(error: yaml.MarkedYAMLError, shown: str) -> UnreadableStudy:
@@ -216,6 +266,8 @@ def _line_of(node: yaml.Node, place: Place) -> int | None:
                 return line
             line, node = entry[0].start_mark.line + 1, entry[1]
         elif isinstance(node, yaml.SequenceNode) and isinstance(step, int):
+            if step >= len(node.value):
+                return line
             node = node.value[step]
             line = node.start_mark.line + 1
     return line
