@@ -178,6 +178,21 @@ def test_a_historic_peak_without_a_threshold_is_left_out(small_study: Any, tmp_p
     assert "thresholds.csv" in study.accounting.set_index("row").loc[74, "reason"]
 
 
+@pytest.mark.parametrize("flags", ["", "unsystematic"])
+def test_a_period_in_use_does_not_stand_for_a_missing_threshold(
+    flags: str, small_study: Any, tmp_path: Path
+) -> None:
+    small_study.put("thresholds.csv", 2, "last_year", "1949")
+    small_study.put(P, 74, "flags", flags)
+    small_study.add(
+        "periods.csv",
+        gauge_id="00101", first_year="1940", last_year="1960", state="natural", use="true", why="no dam yet",
+    )  # fmt: skip
+    study = read(small_study, tmp_path)
+    assert ("excluded", "default") == line(study, 74)
+    assert known(study, "00101", 1950) is None
+
+
 def test_the_ledger_can_give_one_year_a_threshold(small_study: Any, tmp_path: Path) -> None:
     small_study.put("thresholds.csv", 2, "last_year", "1949")
     decide(small_study, subject="threshold", action="set", gauge_id="00101", water_year="1950", value="450")

@@ -16,6 +16,9 @@ from wrackline.study.ledger import Ledger
 from wrackline.study.peaks import Peaks
 from wrackline.study.spans import YEAR_STEP, Periods, Thresholds, find_keys, year_key
 
+HISTORIC_ALONE = (
+    "historic peak without a threshold for its year: give its span and threshold in thresholds.csv"
+)
 ACCOUNTING_COLUMNS = ("file", "row", "gauge_id", "water_year", "fate", "reason", "decided_by")
 
 
@@ -77,7 +80,7 @@ def build_records(
     _by_flags(verdicts, peaks, config.flags)
     period_years, period_of = periods.every_year()
     at_period = find_keys(period_years, peaks.key)
-    _by_periods(verdicts, peaks, periods, period_of, at_period)
+    _by_periods(verdicts, peaks, periods, period_of, at_period, at_threshold >= 0)
     _by_ledger(verdicts, peaks, ledger, config, effects)
     _leave_out_what_says_nothing(verdicts)
     perception_low, perception_high = _perception(verdicts, years, at_threshold)
@@ -133,7 +136,7 @@ def _by_defaults(peaks: Peaks, has_threshold: BoolArray) -> _Verdicts:
     verdicts.say(
         peaks.historic & ~has_threshold,
         "default",
-        "historic peak without a threshold for its year: give its span and threshold in thresholds.csv",
+        HISTORIC_ALONE,
         excluded=True,
     )
     return verdicts
@@ -166,7 +169,12 @@ def _by_flags(verdicts: _Verdicts, peaks: Peaks, uses: Flags) -> None:
 
 
 def _by_periods(
-    verdicts: _Verdicts, peaks: Peaks, periods: Periods, period_of: IntArray, at_period: IntArray
+    verdicts: _Verdicts,
+    peaks: Peaks,
+    periods: Periods,
+    period_of: IntArray,
+    at_period: IntArray,
+    has_threshold: BoolArray,
 ) -> None:
     inside = at_period >= 0
     if not inside.any():
@@ -179,6 +187,9 @@ def _by_periods(
     flagged_out = np.array([str(by).startswith("flag") for by in verdicts.decided_by]) & verdicts.excluded
     kept = inside & use & flagged_out
     verdicts.say(kept, "periods.csv", words[kept] + " is used, whatever the flags", excluded=False)
+    # A period speaks of the basin, not of what would have been on record.
+    alone = kept & peaks.historic & ~has_threshold
+    verdicts.say(alone, "default", HISTORIC_ALONE, excluded=True)
     out = inside & ~use
     verdicts.say(out, "periods.csv", words[out] + " is left out", excluded=True)
 
