@@ -130,6 +130,11 @@ def test_correlation_that_rises_with_distance_is_fitted_by_a_constant():
     np.testing.assert_allclose([np.tanh(0.5)] * 2, rising.correlation([1.0, 500.0]), rtol=1e-9)
 
 
+def test_correlation_below_zero_everywhere_is_fitted_by_none():
+    negative, _ = fit_distance_model(np.arange(1.0, 20), np.full(19, -0.2), np.ones(19), 10, 25)
+    np.testing.assert_allclose([0.0, 0.0], negative.correlation([1.0, 500.0]), atol=1e-8)
+
+
 def test_a_region_whose_correlation_does_not_fall_is_told_so():
     records, lat, lon = region(12, 40, seed=3, a=-0.2, b=0.0)
     scattered = np.random.default_rng(0).permutation(12)

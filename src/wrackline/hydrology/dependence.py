@@ -361,7 +361,8 @@ def _fit_exponential(shape: FloatArray, z: FloatArray, w: FloatArray) -> tuple[f
         pull = (slope * w) @ (z - curve)
         step = np.linalg.lstsq(normal, pull, rcond=None)[0]
         if b == 0 and step[1] <= 0:
-            step = np.array([pull[0] / normal[0, 0], 0.0])
+            # A curve that fell to nothing has no slope left to follow.
+            step = np.array([pull[0] / normal[0, 0] if normal[0, 0] > 0 else 0.0, 0.0])
         for share in 0.5 ** np.arange(12):
             trial_a, trial_b = a + share * step[0], max(b + share * step[1], 0.0)
             trial = float((w * (z - np.exp(trial_a - trial_b * x)) ** 2).sum())
