@@ -96,6 +96,12 @@ def test_every_gauge_that_does_not_serve_has_a_reason():
     assert told[4] == ""
 
 
+def test_the_rounding_of_a_length_decides_on_no_gauge():
+    measured = measure(normal_records((25,)), thresholds=np.zeros(1))
+    barely_less = replace(measured, record_length=np.array([np.nextafter(25.0, 0.0)]))
+    assert [""] == tell_who_serves(barely_less, np.array([True]), [""], [""], 25, ())
+
+
 def test_causes_are_tabulated_with_their_largest_flood_and_its_rank():
     records = normal_records((12, 60))
     cause = np.full(72, "rain", dtype="<U16")

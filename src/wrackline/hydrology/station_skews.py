@@ -15,6 +15,8 @@ from wrackline.stats.skew_variance import station_skew_mse
 
 FEWEST_YEARS = 10
 """Shortest record for which the polynomial of the variance of a skew holds."""
+ROUNDING_YEARS = 1e-6
+"""Lengths that differ by less are equal: a complete record of the least length serves, whatever its unit of flow."""
 FEWEST_OF_A_CAUSE = 10
 """Peaks of one cause that a skew is computed from."""
 
@@ -150,9 +152,9 @@ def tell_who_serves(
             told.append(f"flagged by the screening: {', '.join(barred).replace('_', ' ')}")
         elif not np.isfinite(measured.record_length[i]):
             told.append("no station skew: its record could not be fitted")
-        elif measured.record_length[i] < minimum_years:
+        elif measured.record_length[i] < minimum_years - ROUNDING_YEARS:
             told.append(
-                f"its record is worth {measured.record_length[i]:.0f} years, fewer than {minimum_years:g}"
+                f"its record is worth {measured.record_length[i]:.3g} years, fewer than {minimum_years:g}"
             )
         else:
             told.append("")
