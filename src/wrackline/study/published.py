@@ -112,8 +112,11 @@ def column_table(tables: Iterable[Table], config: StudyConfig) -> Table:
 
 
 def declared_unit(unit: str, config: StudyConfig) -> str:
-    """Unit of a column in the study's tables: ``flow`` and ``area`` stand for the declared ones."""
-    return {"flow": config.units.flow, "area": config.units.area}.get(unit, unit)
+    """Unit of a column in the study's tables: ``flow`` and ``area``, or logarithms of them, stand for the declared ones."""
+    declared: dict[str, str] = {"flow": config.units.flow, "area": config.units.area}
+    for word, own in tuple(declared.items()):
+        declared[f"log10 of {word}"] = f"log10 of {own}"
+    return declared.get(unit, unit)
 
 
 def warning_table(warnings: Iterable[Fault]) -> Table:
