@@ -11,8 +11,8 @@ from wrackline.hydrology.records import BoolArray, FloatArray, IntArray
 
 ROUTES = ("growth_curve", "quantile_regression", "routes_combined")
 EVEN = 0.5
-WEIGHT_SD = 0.25
-"""A weight is drawn towards one half as if half and a quarter were its prior mean and standard deviation."""
+WEIGHT_SD = 0.5
+"""A weight is drawn towards one half as if one half were both its prior mean and its prior standard deviation."""
 
 
 @dataclass(frozen=True)
