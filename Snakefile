@@ -3,39 +3,52 @@
 #   snakemake                                    the example region
 #   snakemake --configfile FOLDER/study.yaml     your study; all its files lie in FOLDER
 #
+# As a module of another workflow: `config: {"study_file": "FOLDER/study.yaml"}` and `prefix: "FOLDER"`.
+#
 # Stages are called through the shell; the science is in src/wrackline.
 import sys
 from pathlib import Path
 
 from snakemake.utils import min_version
 
-sys.path.insert(0, str(Path(workflow.basedir) / "workflow"))
-from study_folder import find_study, forget_damaged, lock_study, read_study
+HERE = Path(workflow.current_basedir.get_path_or_uri(secret_free=True))
+sys.path.insert(0, str(HERE / "workflow"))
+from study_folder import (
+    find_study,
+    forget_damaged,
+    lock_study,
+    named_study,
+    read_study,
+)
 from telling import hush, tell_failure, tell_results
-from wiring import FAILED, STAGES, prepare_shell, settings, source_digest, stage_call
+from wiring import FAILED, STAGES, prepare_shell, settings, source_digest, stage_caller
 
 min_version("9.20")
 
-STUDY = find_study(
-    workflow, default=Path(workflow.basedir) / "example_region" / "study.yaml"
-)
+AS_MODULE = not workflow.modifier.is_main_snakefile()
+if AS_MODULE:
+    STUDY = named_study(config)
+else:
+    STUDY = find_study(workflow, default=HERE / "example_region" / "study.yaml")
 CONFIG = read_study(STUDY)
 RESULTS = CONFIG.output.replace("{", "{{").replace("}", "}}")
 
 if workflow.is_main_process:
-    hush(workflow.dryrun, STUDY.parent / CONFIG.output)
+    if not AS_MODULE:
+        hush(workflow.dryrun, STUDY.parent / CONFIG.output)
     lock_study(STUDY.parent)
     if not workflow.dryrun:
         forget_damaged(STUDY.parent, STAGES, CONFIG.output)
         (STUDY.parent / FAILED).unlink(missing_ok=True)
-prepare_shell(STUDY)
+prepare_shell()
+stage_call = stage_caller(config["study_file"] if AS_MODULE else STUDY.name)
 
+if not AS_MODULE:
 
-workdir: STUDY.parent
+    workdir: STUDY.parent
 
-
-localrules:
-    all,
+    localrules:
+        all,
 
 
 rule all:

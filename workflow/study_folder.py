@@ -26,6 +26,15 @@ def find_study(workflow: Any, default: Path) -> Path:
     return study
 
 
+def named_study(config: dict[str, Any]) -> Path:
+    """Return the study file that another workflow names where it uses this one as a module."""
+    if not config.get("study_file"):
+        stop(
+            'The module statement must name the study: config: {"study_file": "FOLDER/study.yaml"}, prefix: "FOLDER"'
+        )
+    return Path(config["study_file"]).resolve()
+
+
 def read_study(study: Path) -> Any:
     """Return the typed configuration; on faults, print them all and end the run before it touches anything."""
     try:

@@ -6,7 +6,9 @@ import ast
 import hashlib
 import json
 import os
+import shlex
 import sys
+from collections.abc import Callable
 from functools import cache
 from pathlib import Path
 from typing import Any
@@ -14,33 +16,50 @@ from typing import Any
 SOURCES = Path(__file__).resolve().parents[1] / "src"
 PACKAGE = "wrackline"
 DATA_ENDINGS = {".j2", ".css", ".js", ".yaml"}
-STAGES = ("intake", "screen", "dependence", "atsite", "skew", "weight", "pool", "regress", "validate", "estimate", "publish")
+STAGES = (
+    "intake",
+    "screen",
+    "dependence",
+    "atsite",
+    "skew",
+    "weight",
+    "pool",
+    "regress",
+    "validate",
+    "estimate",
+    "publish",
+)
 
 
 FAILED = "work/logs/failed"
 """Stages that failed in this run, the first one first; the engine ends others that ran beside it."""
 
 
-def stage_call(stage: str) -> str:
-    """Return the shell command of a stage: its output goes to the screen and to the rule's log.
+def stage_caller(study: str) -> Callable[[str], str]:
+    """Return a function that gives the shell command of a stage; ``study`` is the study file as seen from the working folder.
 
-    The command holds no place of a machine, so a study or a repository that moves is not run anew; `prepare_shell`
-    sets the two variables. ``-P`` keeps files of the study's own folder from being taken for modules.
+    A stage's output goes to the screen and to the rule's log. The command holds no place of a machine, so a study or a
+    repository that moves is not run anew; `prepare_shell` sets the variable. ``-P`` keeps files of the study's own folder
+    from being taken for modules.
     """
-    place = f"[{STAGES.index(stage) + 1} of {len(STAGES)}] {stage} ..."
-    return (
-        f'echo \'{place}\'; PYTHONPATH="$WRACKLINE_SOURCES" python -P -m {PACKAGE}.stages.{stage} "$WRACKLINE_STUDY"'
-        f" 2>&1 | tee {{log:q}} || {{{{ echo {stage} >> {FAILED}; exit 1; }}}}"
-    )
+    study = shlex.quote(study).replace("{", "{{").replace("}", "}}")
+
+    def stage_call(stage: str) -> str:
+        place = f"[{STAGES.index(stage) + 1} of {len(STAGES)}] {stage} ..."
+        return (
+            f"echo '{place}'; PYTHONPATH=\"$WRACKLINE_SOURCES\" python -P -m {PACKAGE}.stages.{stage} {study}"
+            f' 2>&1 | tee {{log:q}} || {{{{ echo {stage} >> "$(dirname {{log:q}})"/failed; exit 1; }}}}'
+        )
+
+    return stage_call
 
 
-def prepare_shell(study: Path) -> None:
-    """Let stages find the study, the sources that `source_digest` watches, and the Python that runs the workflow.
+def prepare_shell() -> None:
+    """Let stages find the sources that `source_digest` watches, and the Python that runs the workflow.
 
-    The last also where its environment was not activated.
+    The latter also where its environment was not activated.
     """
     os.environ["WRACKLINE_SOURCES"] = str(SOURCES)
-    os.environ["WRACKLINE_STUDY"] = study.name
     folder = str(Path(sys.executable).parent)
     path = os.environ.get("PATH", "").split(os.pathsep)
     if path[0] != folder:

@@ -4,7 +4,7 @@ rule intake:
         lambda wildcards: [
             name
             for name in CONFIG.inputs.model_dump().values()
-            if name and Path(name).is_file()
+            if name and (STUDY.parent / name).is_file()
         ],
     output:
         contribution="work/intake/contribution.json",
