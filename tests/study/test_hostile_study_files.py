@@ -118,3 +118,11 @@ def test_remark_of_the_geodata_library_becomes_a_warning(
     small_study.set_key("inputs:\n", "inputs:\n  regions: regions.gpkg\n")
     warnings = check(small_study.write(tmp_path)).warnings
     assert any("application_id" in w.problem and str(tmp_path) not in w.problem for w in warnings)
+
+
+def test_byte_order_mark_alone_is_an_empty_file(small_study: Any, tmp_path: Path) -> None:
+    small_study.raw["gauges.csv"] = b"\xef\xbb\xbf"
+    assert ("empty_file", "gauges.csv") == (
+        problems(small_study, tmp_path)[0].code,
+        problems(small_study, tmp_path)[0].file,
+    )

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import codecs
 import csv
 import io
 import re
@@ -126,7 +127,7 @@ def is_readable(path: Path, file: str, log: FaultLog) -> bool:
 
 
 def _decode(data: bytes, file: str, log: FaultLog) -> str | None:
-    if not data.strip():
+    if not data.removeprefix(codecs.BOM_UTF8).strip():
         log.problem("empty_file", file, "The file is empty.", "It needs at least its header row.")
     elif data[:4] == b"PK\x03\x04" or data[:8] == b"\xd0\xcf\x11\xe0\xa1\xb1\x1a\xe1":
         log.problem(
