@@ -6,6 +6,7 @@ import importlib
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
+    from wrackline.comparing import compare
     from wrackline.estimating import estimate
     from wrackline.fitting import fit
     from wrackline.study.checking import check
@@ -14,6 +15,7 @@ if TYPE_CHECKING:
 
 _HOME = {
     "check": "wrackline.study.checking",
+    "compare": "wrackline.comparing",
     "estimate": "wrackline.estimating",
     "fit": "wrackline.fitting",
     "import_peaks": "wrackline.study.importing",
@@ -21,7 +23,7 @@ _HOME = {
 }
 """Where the names of the Python interface live; imported when first used, so that a stage stays quick to start."""
 
-__all__ = ["check", "estimate", "fit", "import_peaks", "read_study"]
+__all__ = ["check", "compare", "estimate", "fit", "import_peaks", "read_study"]
 
 
 def __getattr__(name: str) -> Any:

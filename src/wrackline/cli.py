@@ -1,4 +1,4 @@
-"""The command line: ``wrackline check``, ``new``, ``import``, ``fit``, ``estimate``."""
+"""The command line: ``wrackline check``, ``new``, ``import``, ``fit``, ``estimate``, ``freeze``, ``compare``."""
 
 from __future__ import annotations
 
@@ -12,6 +12,7 @@ import typer
 from rich.console import Console
 from rich.text import Text
 
+from wrackline.compare_command import compare
 from wrackline.estimate_command import estimate
 from wrackline.fit_command import fit
 from wrackline.freeze_command import freeze_study, verify_edition
@@ -85,6 +86,7 @@ app.command()(fit)
 app.command()(estimate)
 app.command("import")(import_files)
 app.command("freeze")(freeze_study)
+app.command()(compare)
 
 
 def print_faults(

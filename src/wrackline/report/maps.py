@@ -74,8 +74,8 @@ def draw_study_map(
     """
     figure, axes = new_figure(WIDTH, WIDTH)
     figure.set_layout_engine("none")
-    centre = _central_longitude(np.concatenate([gauges.longitude, targets.longitude]))
-    east_gauges, east_targets = (_unwrap(place.longitude, centre) for place in (gauges, targets))
+    centre = central_longitude(np.concatenate([gauges.longitude, targets.longitude]))
+    east_gauges, east_targets = (unwrap(place.longitude, centre) for place in (gauges, targets))
     _draw_outlines(axes, _rings(basins), centre, color=MUTED, linewidth=0.5, alpha=0.55)
     _draw_outlines(
         axes, _borders(regions), centre, color=INK, linewidth=1.1, alpha=0.75, linestyle=(0, (6, 3))
@@ -161,7 +161,7 @@ def _draw_outlines(axes: Any, lines: list[np.ndarray], centre: float, **look: An
     from matplotlib.collections import LineCollection
 
     if lines:
-        unwrapped = [np.column_stack([_unwrap(line[:, 0], centre), line[:, 1]]) for line in lines]
+        unwrapped = [np.column_stack([unwrap(line[:, 0], centre), line[:, 1]]) for line in lines]
         axes.add_collection(LineCollection(unwrapped, zorder=1, **look), autolim=True)
 
 
@@ -280,12 +280,14 @@ def format_degrees(value: float, positive: str, negative: str) -> str:
     )
 
 
-def _central_longitude(longitude: np.ndarray) -> float:
+def central_longitude(longitude: np.ndarray) -> float:
+    """Return the middle of longitudes on the circle, degrees; 0 where there are none."""
     if len(longitude) == 0:
         return 0.0
     angle = np.radians(longitude)
     return float(np.degrees(np.arctan2(np.sin(angle).mean(), np.cos(angle).mean())))
 
 
-def _unwrap(longitude: np.ndarray, centre: float) -> np.ndarray:
+def unwrap(longitude: np.ndarray, centre: float) -> np.ndarray:
+    """Return longitudes within 180 degrees of ``centre``, so that a region on both sides of the 180th meridian stays whole."""
     return (np.asarray(longitude, dtype=float) - centre + 180.0) % 360.0 - 180.0 + centre
