@@ -82,3 +82,10 @@ def test_positions_fall_as_floods_rise_whatever_the_thresholds():
     order = np.argsort(-flows[known])
     assert (np.diff(aep[known][order]) > 0).all()
     assert ((aep[known] > 0) & (aep[known] < 1)).all()
+
+
+def test_floods_known_only_as_larger_take_the_ranks_above():
+    records = one_gauge([5.0, 10, 10, 20, 30])
+    records = replace(records, flow_high=np.array([5.0, np.inf, 10, 20, np.inf]))
+    # Weibull positions of ranks 5, 3 and 2 of five.
+    np.testing.assert_allclose([5 / 6, np.nan, 4 / 6, 2 / 6, np.nan], plot_positions(records), rtol=1e-12)

@@ -26,7 +26,8 @@ def plot_positions(records: PeakRecords, numerator: str = "weibull") -> FloatArr
     -------
     float array (m,)
         NaN for floods known only as below or above a level. A flood known as an interval with two finite positive
-        ends is placed at its geometric middle.
+        ends is placed at its geometric middle. A flood known only as above a level has no position of its own and
+        takes the rank of that level, so that smaller floods do not move up into its place.
 
     Raises
     ------
@@ -43,7 +44,7 @@ def plot_positions(records: PeakRecords, numerator: str = "weibull") -> FloatArr
     aep = np.full(len(records.water_year), np.nan)
     plotted = (records.flow_low > 0) & np.isfinite(records.flow_high)
     middle = np.sqrt(np.where(plotted, records.flow_low * np.where(plotted, records.flow_high, 1.0), np.nan))
-    size = np.where(records.exact, records.flow_low, middle)
+    size = np.where(plotted & ~records.exact, middle, records.flow_low)
     for start, end in zip(records.offsets[:-1], records.offsets[1:], strict=True):
         rows = slice(start, end)
         aep[rows] = _positions_of_gauge(
@@ -57,17 +58,18 @@ def _positions_of_gauge(
 ) -> FloatArray:
     """Positions of one gauge: each band between thresholds shares out the probability of its own."""
     aep = np.full(len(size), np.nan)
+    ranked = size > 0
     levels = np.unique(np.append(perception_low[np.isfinite(perception_low)], 0.0))
     exceeded = 0.0
     for j in range(len(levels) - 1, -1, -1):
         top = levels[j + 1] if j + 1 < len(levels) else np.inf
-        band = np.flatnonzero(plotted & (size >= levels[j]) & (size < top))
+        band = np.flatnonzero(ranked & (size >= levels[j]) & (size < top))
         lower = np.sum(plotted & (size < levels[j])) + np.sum(~plotted & (high <= levels[j]))
         if not len(band):
             continue
         share = (1 - exceeded) * len(band) / (len(band) + lower)
-        # Equal peaks keep their order in the record; the sort is stable.
-        order = band[np.argsort(-size[band], kind="stable")]
+        # Equal peaks keep their order in the record, after floods that were at least as large; the sort is stable.
+        order = band[np.lexsort((plotted[band], -size[band]))]
         aep[order] = exceeded + share * (np.arange(1, len(band) + 1) - a) / (len(band) + 1 - 2 * a)
         exceeded += share
-    return aep
+    return np.where(plotted, aep, np.nan)
