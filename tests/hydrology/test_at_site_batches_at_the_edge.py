@@ -46,3 +46,18 @@ def test_record_censored_from_both_sides_is_fitted():
     fits = fit_records(records, 0.0, 0.1, low_flood_thresholds=[np.median(flows)])
     assert np.isfinite(fits.best.log10_upper).all()
     assert fits.weighted.station_skew_mse[0] > fits.weighted.skew_mse[0] > 0
+
+
+def test_flood_known_only_as_above_a_level_among_the_low_floods_adds_no_information():
+    flows = 10 ** random_stream(9, "test_no_information").normal(2, 0.3, 43)
+    records = exact_records(["a"], np.array([0, 43]), np.arange(43), flows)
+    vague = np.arange(43) < 3
+    records = replace(
+        records,
+        flow_low=np.where(vague, 2.0, records.flow_low),
+        flow_high=np.where(vague, np.inf, records.flow_high),
+    )
+    known = records.keep_rows(~vague)
+    expected, found = (fit_records(r, low_flood_thresholds=[60.0]).station for r in (known, records))
+    np.testing.assert_allclose(expected.log10_quantile, found.log10_quantile, rtol=1e-6)
+    np.testing.assert_allclose(expected.log10_se, found.log10_se, rtol=1e-3)

@@ -144,7 +144,9 @@ def describe_observation(records: PeakRecords) -> tuple[CensoredSample, Threshol
     -----
     The covariance of the moments follows from the thresholds. Where a flood is known only as below or above a
     level although its thresholds would have let it be recorded, that level counts as the threshold; a flood
-    between two finite levels counts as known.
+    between two finite levels counts as known. Where a flood is known only as above a level below the low-flood
+    threshold, or could be perceived only below that threshold, nothing is left to be known exactly: the year
+    tells on which side of its one level the flood lay.
     """
     low, high = records.flow_low, records.flow_high
     perception_low, perception_high = records.perception_low, records.perception_high
@@ -152,6 +154,7 @@ def describe_observation(records: PeakRecords) -> tuple[CensoredSample, Threshol
     above = np.isposinf(high) & (low > 0)
     perception_low = np.where(below & (perception_low < high), high, perception_low)
     perception_high = np.where(above & (perception_high > low), low, perception_high)
+    perception_low = np.minimum(perception_low, perception_high)
     own = records.gauge_index
     with np.errstate(divide="ignore"):
         sample = compress_sample(own, np.log10(low), np.log10(high), records.n_gauges)
