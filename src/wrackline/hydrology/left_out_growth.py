@@ -16,6 +16,7 @@ def left_out_growth_factors(
     left_out: FloatArray,
     aeps: FloatArray,
     statistic: Statistic,
+    weight_lskew: FloatArray | None = None,
 ) -> FloatArray:
     """Growth factors (m, p) of the pool's law fitted without some of its gauges.
 
@@ -30,17 +31,18 @@ def left_out_growth_factors(
     left_out : (m, n) of 0 and 1
         Which gauges each of the m pools lacks.
     aeps : (p,)
+    weight_lskew : (n,), optional
+        Weights in the averages of L-skew and higher ratios; by default those of L-CV.
 
     Notes
     -----
     Averages are linear in the gauges' ratios, so leaving some out is exact. Where the law does not exist for the
     remaining averages the factors are NaN.
     """
-    kept = (1.0 - left_out) * weight
-    total = kept.sum(axis=1)
-    with np.errstate(invalid="ignore", divide="ignore"):
-        averages = kept @ np.nan_to_num(ratios) / total[:, None]
-    averages[total <= 0] = np.nan
+    first = _averages(ratios[:, :1], weight, left_out)
+    rest = _averages(ratios[:, 1:], weight if weight_lskew is None else weight_lskew, left_out)
+    averages = np.column_stack([first, rest])
+    averages[~np.isfinite(averages).all(axis=1)] = np.nan
     unique, inverse = np.unique(np.nan_to_num(averages, nan=-9.0), axis=0, return_inverse=True)
     law = distributions.BY_NAME[distribution]
     lcv, lskew, lkurtosis, l5 = unique.T
@@ -60,3 +62,9 @@ def left_out_growth_factors(
             continue
         factors[i] = np.maximum(curve.factor(np.asarray(aeps)), SMALLEST_FACTOR)
     return factors[inverse.ravel()]
+
+
+def _averages(ratios: FloatArray, weight: FloatArray, left_out: FloatArray) -> FloatArray:
+    kept = (1.0 - left_out) * weight
+    with np.errstate(invalid="ignore", divide="ignore"):
+        return np.asarray(kept @ np.nan_to_num(ratios) / kept.sum(axis=1)[:, None])

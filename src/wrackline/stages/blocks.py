@@ -10,8 +10,8 @@ from wrackline.hydrology.index_flood import index_sampling_covariance, sample_in
 from wrackline.hydrology.quantile_covariance import quantile_sampling_covariance
 from wrackline.hydrology.records import BoolArray, FloatArray, IntArray
 from wrackline.hydrology.regional_equations import SavedEquations
-from wrackline.stages.gauge_floods import UsedGauges, read_gauge_floods
-from wrackline.stages.regress import describe_errors, pool_of_gauges, site_attributes
+from wrackline.stages.gauge_floods import UsedGauges, intercept_groups, pools_of_sites, read_gauge_floods
+from wrackline.stages.regress import describe_errors, relative_sd_of, site_attributes
 from wrackline.stages.running import StudyFiles
 from wrackline.stats.gls import fit_gls
 
@@ -27,9 +27,8 @@ def predict_blocks(
     """Predict the gauges of every block by equations and growth curves made without the block, log10 (g, p)."""
     from wrackline.stages.validate import growth_without
 
-    region = pool_of_gauges(growth["pools"], gauges.gauge_ids)
-    relative_sd = np.array([growth["pools"][r]["index_relative_sd"] if r else np.nan for r in region])
-    index = sample_index_floods(gauges.records, relative_sd, growth["statistic"])
+    region = intercept_groups(growth, gauges.sites, pools_of_sites(growth, gauges.gauge_ids))
+    index = sample_index_floods(gauges.records, relative_sd_of(growth, gauges.gauge_ids), growth["statistic"])
     saved = SavedEquations.from_dict(equations["index_flood"])
     design = saved.plan.design(site_attributes(gauges.sites, saved.plan), region)
     used = index.usable & np.isfinite(design).all(axis=1)

@@ -8,18 +8,19 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
+from wrackline.hydrology.regional_equations import SavedEquations
 from wrackline.report.appendices import appendix_section
 from wrackline.report.estimate_sections import estimate_section, rare_aep
 from wrackline.report.figures_regress import draw_targets
 from wrackline.stages.gauge_estimates import GAUGE_COLUMNS, GaugeEstimates, estimate_gauges, gauge_table
-from wrackline.stages.gauge_floods import UsedGauges, read_gauge_floods, read_used_gauges
+from wrackline.stages.gauge_floods import UsedGauges, pools_of_sites, read_gauge_floods, read_used_gauges
 from wrackline.stages.running import StudyFiles, main
 from wrackline.study.contribution import Contribution, write_contribution
 from wrackline.study.faults import Fault, FaultLog
 from wrackline.study.handover import read_sites
 from wrackline.study.saved_models import adopted_routes, describe_models
 from wrackline.study.tables import Table, read_table
-from wrackline.study.target_estimates import TARGET_COLUMNS, estimate_targets
+from wrackline.study.target_estimates import TARGET_COLUMNS, estimate_targets, site_attributes
 
 LEDGER_TEXT = ("date", "by", "subject", "action", "why", "water_year", "pool", "value", "evidence", "effect")
 
@@ -40,8 +41,15 @@ def run(study: StudyFiles) -> str:
     )
     records = read_table(study.work("weight") / "tables" / "record_estimates.csv", text=("source",))
     adopt = adopted_routes(config, ledger, set(targets["target_id"]), faults)
+    own = targets["target_id"].tolist()
     models = describe_models(
-        config, equations, growth, routes, _describe_gauges(gauges, at_gauges, regional), adopt
+        config,
+        equations,
+        growth,
+        routes,
+        _describe_gauges(gauges, at_gauges, regional, equations, pools_of_sites(growth, gauges.gauge_ids)),
+        dict(zip(own, pools_of_sites(growth, own), strict=True)) if "home" in growth else {},
+        adopt,
     )
     table = estimate_targets(config, models, targets)
 
@@ -75,9 +83,15 @@ def _read_json(study: StudyFiles, place: str) -> dict[str, Any]:
 
 
 def _describe_gauges(
-    gauges: UsedGauges, at_gauges: GaugeEstimates, regional: pd.DataFrame
+    gauges: UsedGauges,
+    at_gauges: GaugeEstimates,
+    regional: pd.DataFrame,
+    equations: dict[str, Any],
+    pools: list[str],
 ) -> dict[str, dict[str, Any]]:
-    """What a transfer along a stream needs of every gauge: area, adopted flood, regional estimates without it."""
+    """What new sites need of every gauge: area, adopted flood, regional estimates without it, pool and attributes."""
+    plan = SavedEquations.from_dict(equations["index_flood"]).plan
+    places = plan.transformed(site_attributes(gauges.sites, plan))
     by_route = {
         (str(gauge), str(route)): rows["log10_flow"].tolist()
         for (gauge, route), rows in regional.groupby(["gauge_id", "route"], sort=False)
@@ -90,6 +104,8 @@ def _describe_gauges(
         if own and np.isfinite(at_gauges.log10_flow[i]).all():
             found[gauge] = {
                 "area_km2": float(area[i]),
+                "pool": pools[i] if np.isfinite(places[i]).all() else "",
+                "place": [value if np.isfinite(value) else None for value in places[i].tolist()],
                 "aeps": at_gauges.aeps.tolist(),
                 "log10_flow": at_gauges.log10_flow[i].tolist(),
                 "variance": at_gauges.variance[i].tolist(),

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import pandas as pd
@@ -99,6 +100,19 @@ class GaugeFloods:
 def all_aeps(config: StudyConfig) -> tuple[float, ...]:
     """The probabilities of gauges and targets, from often to rare."""
     return tuple(sorted({*config.aeps.gauges, *config.aeps.targets}, reverse=True))
+
+
+def pools_of_sites(growth: dict[str, Any], site_ids: list[str]) -> list[str]:
+    """Name the pool that every gauge or target takes its growth curve from; blank for a site in none."""
+    home = growth.get("home")
+    if home is None:
+        home = {gauge: name for name in sorted(growth["pools"]) for gauge in growth["pools"][name]["gauges"]}
+    return [name if (name := home.get(site, "")) in growth["pools"] else "" for site in site_ids]
+
+
+def intercept_groups(growth: dict[str, Any], sites: pd.DataFrame, pools: list[str]) -> list[str]:
+    """Name the group of every site where regions have intercepts of their own: its pool, where pools are regions."""
+    return pools if growth.get("method", "regions") == "regions" else sites["region"].tolist()
 
 
 def read_used_gauges(study: StudyFiles) -> UsedGauges:

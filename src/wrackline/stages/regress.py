@@ -37,6 +37,8 @@ from wrackline.report.figures_regress import draw_quantile_residuals, draw_regre
 from wrackline.stages.gauge_floods import (
     GaugeFloods,
     UsedGauges,
+    intercept_groups,
+    pools_of_sites,
     read_gauge_floods,
     read_used_gauges,
 )
@@ -56,6 +58,7 @@ from wrackline.study.contribution import Contribution, write_contribution
 from wrackline.study.faults import FaultLog
 from wrackline.study.handover import read_sites
 from wrackline.study.tables import write_table
+from wrackline.study.target_estimates import site_attributes
 
 INFLUENCE_SIZES = (20, 30, 45, 60, 90)
 """Gauges tried in a region of influence."""
@@ -94,13 +97,14 @@ def run(study: StudyFiles) -> str:
     config, faults = study.config, FaultLog()
     gauges = read_used_gauges(study)
     floods = read_gauge_floods(study, gauges)
-    pools = json.loads((study.work("pool") / "growth.json").read_text(encoding="utf-8"))["pools"]
+    growth = json.loads((study.work("pool") / "growth.json").read_text(encoding="utf-8"))
     targets = read_sites(study.work("intake") / "targets.csv")
-    region = pool_of_gauges(pools, gauges.gauge_ids)
+    pool = pools_of_sites(growth, gauges.gauge_ids)
+    region = intercept_groups(growth, gauges.sites, pool)
 
     choice = search_attributes(config, gauges, floods, targets, region, faults)
     attributes = config.regression.attributes or (choice.best.attributes if choice else ("area",))
-    index = fit_index(config, gauges, pools, region, attributes, faults)
+    index = fit_index(config, gauges, growth, region, attributes, faults)
     quantiles = fit_quantiles(config, gauges, floods, region, attributes, faults)
 
     folder = study.work("regress")
@@ -109,7 +113,7 @@ def run(study: StudyFiles) -> str:
     model = describe_models(config, index, quantiles, choice)
     draw_regression(
         folder / "figures" / "index_flood.png",
-        index_table(config, gauges, index, region).frame,
+        index_table(config, gauges, index, pool).frame,
         gauges.sites["area_km2"].to_numpy() / config.area_in_km2,
         config,
     )
@@ -120,7 +124,7 @@ def run(study: StudyFiles) -> str:
             quantiles.regression.fits[rare_place(quantiles.floods.aeps)].residuals,
             float(quantiles.floods.aeps[rare_place(quantiles.floods.aeps)]),
         )
-    tables = [index_table(config, gauges, index, region), subsets]
+    tables = [index_table(config, gauges, index, pool), subsets]
     if quantiles:
         tables.append(regression_table(config, gauges, quantiles))
     write_contribution(
@@ -139,10 +143,10 @@ def run(study: StudyFiles) -> str:
     return told
 
 
-def pool_of_gauges(pools: dict[str, Any], gauge_ids: list[str]) -> list[str]:
-    """Name the pool of every gauge; blank for a gauge in none."""
-    home = {gauge_id: name for name in sorted(pools) for gauge_id in pools[name]["gauges"]}
-    return [home.get(gauge_id, "") for gauge_id in gauge_ids]
+def relative_sd_of(growth: dict[str, Any], gauge_ids: list[str]) -> FloatArray:
+    """Standard error of one year's worth of index flood over the index flood (g,), from every gauge's pool."""
+    names = pools_of_sites(growth, gauge_ids)
+    return np.array([growth["pools"][name]["index_relative_sd"] if name else np.nan for name in names])
 
 
 def plan_design(config: StudyConfig, names: tuple[str, ...], regions: list[str], kind: str) -> DesignPlan:
@@ -150,15 +154,6 @@ def plan_design(config: StudyConfig, names: tuple[str, ...], regions: list[str],
     known = tuple(sorted({name for name in regions if name})) if kind != "one" else ()
     transforms = tuple("log10" if name == "area" else config.attributes[name].transform for name in names)
     return DesignPlan(names, transforms, known, separate=kind == "separate")
-
-
-def site_attributes(sites: pd.DataFrame, plan: DesignPlan) -> dict[str, FloatArray]:
-    """Pick the plan's attributes from a table of sites; area in km2, an absent attribute is missing."""
-    columns = {name: "area_km2" if name == "area" else name for name in plan.names}
-    return {
-        name: sites[column].to_numpy(dtype=float) if column in sites else np.full(len(sites), np.nan)
-        for name, column in columns.items()
-    }
 
 
 def rare_place(aeps: FloatArray) -> int:
@@ -179,7 +174,7 @@ def search_attributes(
     everything = plan_design(config, names, region, "one")
     at_gauges = everything.transformed(site_attributes(gauges.sites, everything))
     at_targets = everything.transformed(site_attributes(targets, everything))
-    usable = floods.usable & np.array([bool(name) for name in region])
+    usable = floods.usable & np.array([bool(name) for name in region], dtype=bool)
     whole = np.isfinite(at_gauges[usable]).all(axis=0) & np.isfinite(at_targets).all(axis=0)
     missing = [name for name, there in zip(names, whole, strict=True) if not there]
     if missing:
@@ -232,14 +227,15 @@ def describe_errors(
 def fit_index(
     config: StudyConfig,
     gauges: UsedGauges,
-    pools: dict[str, Any],
+    growth: dict[str, Any],
     region: list[str],
     attributes: tuple[str, ...],
     faults: FaultLog,
 ) -> IndexEquation:
     """Regress the index flood; too few gauges for the coefficients end the run."""
-    relative_sd = np.array([pools[name]["index_relative_sd"] if name else np.nan for name in region])
-    index = sample_index_floods(gauges.records, relative_sd, config.index_flood.statistic)
+    index = sample_index_floods(
+        gauges.records, relative_sd_of(growth, gauges.gauge_ids), config.index_flood.statistic
+    )
     covariance = index_sampling_covariance(
         index.log10_variance,
         gauges.common_years,

@@ -59,13 +59,13 @@ SUBSET_COLUMNS = (
 )
 
 
-def index_table(config: StudyConfig, gauges: UsedGauges, equation: IndexEquation, region: list[str]) -> Table:
+def index_table(config: StudyConfig, gauges: UsedGauges, equation: IndexEquation, pool: list[str]) -> Table:
     """A row per used gauge: sample, regression, residual, leverage, influence."""
     index, in_fit = equation.index, equation.in_fit
     possible = np.asarray(np.isfinite(equation.design).all(axis=1))
     regression = np.full(len(possible), np.nan)
     regression[possible] = 10 ** equation.fit.predict(equation.design[possible])[0]
-    no_pool = np.array([not name for name in region])
+    no_pool = np.array([not name for name in pool])
     reasons = np.select(
         [in_fit, no_pool, index.usable],
         ["", "in no pool, so its sampling error is unknown", "an attribute has no value after its transformation"],

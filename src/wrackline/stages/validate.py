@@ -27,7 +27,7 @@ from wrackline.hydrology.routes import (
 )
 from wrackline.report.figures_validate import draw_validation
 from wrackline.stages.blocks import predict_blocks
-from wrackline.stages.gauge_floods import UsedGauges, all_aeps, read_used_gauges
+from wrackline.stages.gauge_floods import UsedGauges, all_aeps, pools_of_sites, read_used_gauges
 from wrackline.stages.running import StudyFiles, main
 from wrackline.stages.validate_page import validation_section
 from wrackline.stats.lmoments import sample_lmoments
@@ -250,17 +250,30 @@ def growth_without(
         lm = sample_lmoments(exact.flow_low, exact.offsets)
     ratios = np.column_stack([lm.t, lm.t3, lm.t4, lm.t5])
     place = {gauge: i for i, gauge in enumerate(gauges.gauge_ids)}
+    home = np.array(pools_of_sites(growth, gauges.gauge_ids), dtype=object)
     factors = np.full((len(place), len(aeps)), np.nan)
     ln_sd = np.full_like(factors, np.nan)
-    for pool in growth["pools"].values():
-        members = np.array([place[gauge] for gauge in pool["gauges"] if gauge in place], dtype=np.int64)
-        weight = np.array([w for gauge, w in pool["gauges"].items() if gauge in place])
-        same = group[members][:, None] == group[members][None, :]
-        factors[members] = left_out_growth_factors(
-            pool["distribution"], ratios[members], weight, same.astype(float), aeps, growth["statistic"]
+    for name, pool in growth["pools"].items():
+        sites = np.flatnonzero(home == name)
+        if not len(sites):
+            continue
+        named = [gauge for gauge in pool["gauges"] if gauge in place]
+        members = np.array([place[gauge] for gauge in named], dtype=np.int64)
+        weight = np.array([pool["gauges"][gauge] for gauge in named])
+        of_lskew = pool.get("gauges_lskew", pool["gauges"])
+        weight_lskew = np.array([of_lskew.get(gauge, 0.0) for gauge in named])
+        same = group[sites][:, None] == group[members][None, :]
+        factors[sites] = left_out_growth_factors(
+            pool["distribution"],
+            ratios[members],
+            weight,
+            same.astype(float),
+            aeps,
+            growth["statistic"],
+            weight_lskew,
         )
         at = [pool["aeps"].index(aep) for aep in aeps.tolist()]
-        ln_sd[members] = np.array(pool["ln_sd_new_site"])[at]
+        ln_sd[sites] = np.array(pool["ln_sd_new_site"])[at]
     return factors, ln_sd
 
 

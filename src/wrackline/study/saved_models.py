@@ -24,6 +24,7 @@ def describe_models(
     growth: dict[str, Any],
     routes: dict[str, Any],
     gauges: dict[str, dict[str, Any]],
+    target_pools: dict[str, str],
     adopt: list[dict[str, str]],
 ) -> dict[str, Any]:
     """Gather all that an estimate at a new site needs; flows in m3/s, areas in km2, logarithms of base 10."""
@@ -43,6 +44,8 @@ def describe_models(
         "index_flood": equations["index_flood"],
         "quantiles": equations.get("quantiles"),
         "growth": {name: {key: pool[key] for key in kept} for name, pool in growth["pools"].items()},
+        "pooling_method": growth.get("method", "regions"),
+        "home": target_pools,
         "routes": routes,
         "gauges": gauges,
         "adopt": adopt,
@@ -93,7 +96,16 @@ def read_saved_models(results: Path) -> tuple[StudyConfig, dict[str, Any]]:
     try:
         models = json.loads(path.read_text(encoding="utf-8"))
         config = StudyConfig.model_validate(models["settings"])
-        missing = {"index_flood", "quantiles", "growth", "routes", "gauges", "adopt"} - set(models)
+        missing = {
+            "index_flood",
+            "quantiles",
+            "growth",
+            "routes",
+            "gauges",
+            "adopt",
+            "home",
+            "pooling_method",
+        } - set(models)
         if models["format"] != FORMAT or missing:
             raise ValueError("another format")
     except OSError:

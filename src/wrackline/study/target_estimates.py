@@ -49,11 +49,32 @@ class _Notes:
         return "; ".join([*self.site[at], *self.route.get((at, route), [])])
 
 
-def pool_of_sites(config: StudyConfig, regions: list[str], pools: dict[str, Any]) -> list[str]:
-    """Name every site's pool; blank where it has none."""
-    if config.pooling.regions == "one":
-        return ["all" if "all" in pools else ""] * len(regions)
-    return [name if name in pools else "" for name in regions]
+def pools_of_targets(models: dict[str, Any], targets: pd.DataFrame) -> tuple[list[str], list[list[str]]]:
+    """Name every target's pool (blank: none), and say where it is borrowed.
+
+    Where pools are regions the site's region says. Otherwise the study's own targets have theirs, and a new site takes the
+    pool of the gauge most like it in the index equation's attributes.
+    """
+    pools = models["growth"]
+    if models["pooling_method"] == "regions":
+        return [name if name in pools else "" for name in targets["region"]], [[] for _ in targets["region"]]
+    plan = SavedEquations.from_dict(models["index_flood"]).plan
+    places = plan.transformed(site_attributes(targets, plan))
+    known = {gauge: one for gauge, one in models["gauges"].items() if one["pool"]}
+    at_gauges = np.array([one["place"] for one in known.values()], dtype=float).reshape(len(known), -1)
+    scale = np.maximum(at_gauges.std(axis=0), 1e-12) if len(known) else 1.0
+    names: list[str] = []
+    notes: list[list[str]] = []
+    for target, place in zip(targets["target_id"], places, strict=True):
+        own = models["home"].get(target)
+        if own is not None or not len(known) or not np.isfinite(place).all():
+            names.append(own if own in pools else "")
+            notes.append([])
+            continue
+        nearest = list(known)[int((((at_gauges - place) / scale) ** 2).sum(axis=1).argmin())]
+        names.append(known[nearest]["pool"])
+        notes.append([f"its growth curve is that of gauge {nearest}, the gauge most like it"])
+    return names, notes
 
 
 def site_attributes(sites: pd.DataFrame, plan: DesignPlan) -> dict[str, FloatArray]:
@@ -78,8 +99,9 @@ def estimate_targets(config: StudyConfig, models: dict[str, Any], targets: pd.Da
         As intake checks it: SI units, sorted.
     """
     aeps = np.array(config.aeps.targets, dtype=float)
-    pool = pool_of_sites(config, targets["region"].tolist(), models["growth"])
+    pool, borrowed = pools_of_targets(models, targets)
     routes, notes = _regional_routes(config, models, targets, pool, aeps)
+    notes.site = [a + b for a, b in zip(notes.site, borrowed, strict=True)]
     transfers = _transfers(config, models, targets, routes, aeps)
     adopted = [
         _adopt(config, models, target, i, routes, transfers, notes)
@@ -94,7 +116,8 @@ def _regional_routes(
     config: StudyConfig, models: dict[str, Any], targets: pd.DataFrame, pool: list[str], aeps: FloatArray
 ) -> tuple[dict[str, RoutePredictions], _Notes]:
     index = SavedEquations.from_dict(models["index_flood"])
-    design, notes = _place(index, targets, pool)
+    group = pool if models["pooling_method"] == "regions" else targets["region"].tolist()
+    design, notes = _place(index, targets, group)
     log10_index, variance = index.predict(design)
     growth, growth_sd = growth_at(aeps, models["growth"], pool)
     by_growth = scale_growth_curve(
@@ -103,7 +126,7 @@ def _regional_routes(
     quantile = None
     if models["quantiles"] is not None:
         equations = pick_equations(models["quantiles"], aeps)
-        design, more = _place(equations, targets, pool)
+        design, more = _place(equations, targets, group)
         notes = [list(dict.fromkeys(a + b)) for a, b in zip(notes, more, strict=True)]
         quantile = RoutePredictions(*equations.predict(design), equations.degrees_of_freedom)
     for i, name in enumerate(pool):
@@ -113,12 +136,12 @@ def _regional_routes(
 
 
 def _place(
-    equations: SavedEquations, targets: pd.DataFrame, pool: list[str]
+    equations: SavedEquations, targets: pd.DataFrame, group: list[str]
 ) -> tuple[FloatArray, list[list[str]]]:
     """Design rows of the targets, and what to know of their attributes."""
     attributes = site_attributes(targets, equations.plan)
     transformed = equations.plan.transformed(attributes)
-    design = equations.plan.design(attributes, pool)
+    design = equations.plan.design(attributes, group)
     notes = equations.notes(transformed, design)
     for i in np.flatnonzero(~np.isfinite(transformed).all(axis=1)):
         lacking = [n for n, v in zip(equations.plan.names, transformed[i], strict=True) if not np.isfinite(v)]
