@@ -7,6 +7,7 @@ import re
 import shlex
 import subprocess
 import sys
+import tomllib
 from pathlib import Path
 
 import pytest
@@ -18,7 +19,9 @@ import start
 def commands(repository: Path) -> list[str]:
     """Lines of the README's blocks of commands, without comments."""
     blocks = re.findall(
-        r"^```\n(.*?)^```$", (repository / "README.md").read_text(encoding="utf-8"), re.DOTALL | re.MULTILINE
+        r"^```sh\n(.*?)^```$",
+        (repository / "README.md").read_text(encoding="utf-8"),
+        re.DOTALL | re.MULTILINE,
     )
     return [line.split("#")[0].strip() for block in blocks for line in block.splitlines() if line.strip()]
 
@@ -106,13 +109,75 @@ def test_exit_status_is_that_of_what_ran(monkeypatch: pytest.MonkeyPatch) -> Non
     assert start.run_tests([]) == 1, "a failed check fails the command even when all tests pass"
 
 
-def test_every_wrackline_command_of_the_readme_exists(repository: Path) -> None:
+def test_every_wrackline_command_of_the_readme_exists_with_its_options(commands: list[str]) -> None:
     from typer.testing import CliRunner
 
     from wrackline.cli import app
 
+    own = [shlex.split(command) for command in commands if command.startswith("wrackline ")]
+    assert {"new", "import", "check", "fit", "estimate", "freeze", "compare"} == {words[1] for words in own}
+    for words in own:
+        told = CliRunner().invoke(app, [words[1], "--help"])
+        assert 0 == told.exit_code, words
+        for option in [word for word in words if word.startswith("--")]:
+            assert re.search(rf"^ +{option}\b", told.output, re.MULTILINE), (words[1], option)
+
+
+def test_commands_for_one_gauge_and_for_a_new_study_work_as_written(
+    commands: list[str], tmp_path: Path
+) -> None:
+    rows = "".join(f"{1980 + n},{90 + 31 * n % 47}\n" for n in range(25))
+    (tmp_path / "peaks_of_one_gauge.csv").write_text("water_year,flow\n" + rows, encoding="utf-8")
+    for name in ("new", "fit"):
+        (command,) = [command for command in commands if command.startswith(f"wrackline {name} ")]
+        ran = subprocess.run(
+            [sys.executable, "-m", "wrackline.cli", *shlex.split(command)[1:]],
+            cwd=tmp_path,
+            capture_output=True,
+            text=True,
+        )
+        assert 0 == ran.returncode, ran.stderr
+    assert (tmp_path / "my_region" / "study.yaml").is_file()
+
+
+def test_readme_fits_two_screens_and_its_links_lead_somewhere(repository: Path) -> None:
     text = (repository / "README.md").read_text(encoding="utf-8")
-    named = set(re.findall(r"bin/wrackline (\w+)", text))
-    assert {"new", "check"} <= named
-    for name in sorted(named):
-        assert 0 == CliRunner().invoke(app, [name, "--help"]).exit_code, name
+    assert 90 >= len(text.splitlines()), "about two screens"
+    for page in ("README.md", "DEVELOPERS.md", "CHANGELOG.md", "example_region/README.md"):
+        links = re.findall(r"\]\(([^)#]+)\)", (repository / page).read_text(encoding="utf-8"))
+        for link in links:
+            assert "://" in link or (repository / page).parent.joinpath(link).exists(), (page, link)
+
+
+def test_version_is_the_same_wherever_it_stands(repository: Path) -> None:
+    def found(pattern: str, page: str) -> str:
+        match = re.search(pattern, (repository / page).read_text(encoding="utf-8"), re.MULTILINE)
+        assert match, page
+        return match[1]
+
+    version = found(r'^version = "(.+)"$', "pyproject.toml")
+    assert version == found(r"^version: (.+)$", "CITATION.cff")
+    assert version == found(r"^## (\S+) \(", "CHANGELOG.md")
+    date = found(r'^date-released: "(.+)"$', "CITATION.cff")
+    assert date == found(r"^## \S+ \((.+)\)$", "CHANGELOG.md")
+
+
+def test_minimum_versions_are_met_by_the_pinned_ones(repository: Path) -> None:
+    project = tomllib.loads((repository / "pyproject.toml").read_text(encoding="utf-8"))["project"]
+    pinned = dict(
+        line.lower().replace("_", "-").split("==")
+        for line in (repository / "workflow/envs/constraints.txt").read_text(encoding="utf-8").splitlines()
+        if "==" in line
+    )
+    wanted = [
+        *project["dependencies"],
+        *(need for extra in project["optional-dependencies"].values() for need in extra),
+    ]
+    assert len(wanted) > 20
+    for need in wanted:
+        name, least = re.match(r"([\w-]+)>=([\d.]+)$", need).groups()  # type: ignore[union-attr]
+        assert numbers(least) <= numbers(pinned[name.lower()]), need
+
+
+def numbers(version: str) -> tuple[int, ...]:
+    return tuple(int(part) for part in re.findall(r"\d+", version)[:3])
