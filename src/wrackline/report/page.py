@@ -10,6 +10,8 @@ from functools import cache
 from importlib.resources import files
 from typing import Any
 
+from wrackline.report.interactive import frame_items, library_script
+from wrackline.report.page_data import embed_json
 from wrackline.report.rounding import THIN_SPACE, format_count, format_percent, format_unit
 from wrackline.study.config import StudyConfig
 from wrackline.study.contribution import PageTable, Section
@@ -19,12 +21,12 @@ from wrackline.study.provenance import Run
 READING_ORDER = (
     "data",
     "screening",
-    "dependence",
     "station",
-    "skew",
-    "weighted",
+    "dependence",
     "homogeneity",
     "growth",
+    "skew",
+    "weighted",
     "index_flood",
     "regression",
     "validation",
@@ -38,7 +40,7 @@ MONTHS = (
 )  # fmt: skip
 LONG_TABLE = 25
 """Rows above which a table is folded up on the screen (print shows it)."""
-SHOWN_ROWS = 500
+SHOWN_ROWS = 1200
 SHOWN_WARNINGS = 150
 SHOWN_PEAKS = 20_000
 _NUMBER = re.compile(r"[<>≤≥±~]?\s*[-\u2212+]?[\d\s,.\u202f]*\d(?:e[-+]?\d+)?\s*%?")
@@ -146,6 +148,10 @@ class StudyPage:
     warnings: tuple[Fault, ...]
     ledger: PageTable | None
     peaks: tuple[GaugePeaks, ...]
+    asked: tuple[str, ...] = ()
+    """What was asked of the study, in sentences."""
+    data: Mapping[str, Any] | None = None
+    """What the map, the site panel and the calculator show; None: the page has none of them."""
 
 
 def order_sections(sections: Iterable[Section]) -> tuple[Section, ...]:
@@ -193,10 +199,30 @@ def render_page(page: StudyPage) -> str:
             peaks=page.peaks if listed <= SHOWN_PEAKS else (),
             month=MONTHS[config.water_year_starts - 1],
             css=_css(),
+            **_embedded(page.data),
         )
         .rstrip()
         + "\n"
     )
+
+
+def _embedded(data: Mapping[str, Any] | None) -> dict[str, Any]:
+    """The page's data and scripts, marked as ready for script elements."""
+    from markupsafe import Markup
+
+    names = ["page_base.js", "tables.js"]
+    if data is None:
+        return {"data": Markup("null"), "frames": None, "library": "", "scripts": _scripts(names), "calculator": False}
+    if data["calculator"]:
+        names += ["estimate.js", "calculator.js"]
+    names += ["frames.js", "map.js", "site.js", "search.js"]
+    return {
+        "data": Markup(embed_json(data)),
+        "frames": Markup(embed_json(frame_items(data))),
+        "library": Markup(library_script()),
+        "scripts": _scripts(names),
+        "calculator": bool(data["calculator"]),
+    }
 
 
 def is_number(text: str) -> bool:
@@ -228,8 +254,11 @@ def cite(config: StudyConfig, run: Run) -> str:
 
 
 def _contents(page: StudyPage) -> list[tuple[str, str]]:
-    entries = [("glance", "At a glance")]
+    entries = [("asked", "What was asked")] if page.asked else []
+    entries += [("glance", "At a glance")]
+    entries += [("map-section", "Map and sites")] if page.data else []
     entries += [(f"section-{section.key}", section.title) for section in page.sections]
+    entries += [("calculator", "Calculator for ungauged sites")] if page.data and page.data["calculator"] else []
     entries += [("warnings", "Warnings"), ("cautions", "Cautions"), ("methods", "Methods")]
     entries += [("provenance", "Provenance and citation"), ("peaks", "Peaks used")]
     return entries + ([("ledger", "Ledger of decisions")] if page.ledger else [])
@@ -271,6 +300,13 @@ def _template() -> Any:
     return environment.from_string(
         files("wrackline.report").joinpath("page.html.j2").read_text(encoding="utf-8")
     )
+
+
+def _scripts(names: Iterable[str]) -> list[Any]:
+    from markupsafe import Markup
+
+    folder = files("wrackline.report")
+    return [Markup(folder.joinpath(name).read_text(encoding="utf-8")) for name in names]
 
 
 def _css() -> Any:

@@ -8,6 +8,7 @@ from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import pandas as pd
@@ -17,6 +18,8 @@ from wrackline.report.glance import count_study, list_ledger, list_peaks, summar
 from wrackline.report.map_styles import style_layers
 from wrackline.report.maps import Places, draw_study_map
 from wrackline.report.page import PageFigure, Run, StudyPage, order_sections, render_page
+from wrackline.report.page_data import build_page_data
+from wrackline.report.question import describe_question
 from wrackline.report.style import save_figure
 from wrackline.stages.running import StudyFiles, main
 from wrackline.study.contribution import to_json
@@ -73,7 +76,7 @@ def run(study: StudyFiles) -> str:
             if name in layers:
                 write_text(folder / "maps" / f"{name}.sld", style)
         manifest = build_manifest(study.config, study.study_file, folder)
-        page = _page(study, material, folder, Run.from_manifest(manifest))
+        page = _page(study, material, folder, Run.from_manifest(manifest), layers)
         write_text(folder / PAGE, render_page(page))
         manifest["outputs"][PAGE] = {"sha256": digest_file(folder / PAGE)}
         write_text(folder / MANIFEST, to_json(manifest))
@@ -199,7 +202,9 @@ def _regions(layers: Mapping[str, Layer]) -> list[str]:
     return sorted({text if isinstance(text, str) else "" for text in used})
 
 
-def _page(study: StudyFiles, material: Material, folder: Path, run: Run) -> StudyPage:
+def _page(
+    study: StudyFiles, material: Material, folder: Path, run: Run, layers: Mapping[str, Layer]
+) -> StudyPage:
     sections = order_sections(s for output in material.stages for s in output.published_sections())
     shown = {figure.file: figure for section in sections for figure in section.figures}
     study_map = PageFigure(
@@ -221,6 +226,25 @@ def _page(study: StudyFiles, material: Material, folder: Path, run: Run) -> Stud
         warnings=material.warnings,
         ledger=list_ledger(material.tables),
         peaks=list_peaks(material.records, material.gauges, study.config.flow_in_m3s),
+        asked=describe_question(study.config, len(material.gauges), len(material.targets)),
+        data=_page_data(study, material, folder, layers) if len(material.gauges) else None,
+    )
+
+
+def _page_data(
+    study: StudyFiles, material: Material, folder: Path, layers: Mapping[str, Layer]
+) -> dict[str, Any]:
+    """What the page's scripts show; peaks of all gauges that were read, also of those left out."""
+    records = read_records(study.work("intake") / "records.csv", material.gauges["gauge_id"].tolist())
+    return build_page_data(
+        study.config,
+        material.tables,
+        {name: model for output in material.stages for name, model in output.contribution.models.items()},
+        material.gauges,
+        material.targets,
+        records,
+        layers,
+        folder / "maps" / SKEW_MAP,
     )
 
 
