@@ -226,7 +226,9 @@ def test_wakeby_says_which_step_it_took():
 
 
 @pytest.mark.parametrize(
-    ("law", "peer"), [(glo, "glo"), (gev, "gev"), (gno, "gno"), (pe3, "pe3"), (gpa, "gpa")], ids=CANDIDATES
+    ("law", "peer"),
+    [(glo, "glo"), (gev, "gev"), (gno, "gno"), (pe3, "pe3"), (gpa, "gpa")],
+    ids=["GLO", "GEV", "GNO", "PE3", "GPA"],
 )
 @pytest.mark.parametrize("t3", [-0.2, 0.08, 0.25, 0.45])
 def test_quantiles_agree_with_lmoments3(law, peer, t3):
