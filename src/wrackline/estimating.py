@@ -89,7 +89,8 @@ def estimate(results: str | Path, targets: str | Path) -> TargetEstimates:
     results, path = Path(results), Path(targets)
     config, models = read_saved_models(results)
     log = FaultLog()
-    sites = _read_sites(path, config, sorted(models["gauges"]), results, sorted(models["growth"]), log)
+    regions = sorted(models["growth"]) if models["pooling_method"] == "regions" else []
+    sites = _read_sites(path, config, sorted(models["gauges"]), results, regions, log)
     log.stop_on_problems()
     table = estimate_targets(config, models, sites)
     return TargetEstimates(
@@ -119,7 +120,7 @@ def _read_sites(
         sites["region"] = "all"
     elif config.pooling.regions == "polygons":
         sites["region"] = _regions_of(sites, results, path.name, log)
-    else:
+    elif pools:
         _check_regions(sites, pools, path.name, log)
     return sites.drop(columns="row")
 

@@ -20,13 +20,15 @@ import pytest
 pytestmark = pytest.mark.workflow
 
 Run = Callable[..., "subprocess.CompletedProcess[str]"]
-STAGES = ["intake", "screen", "dependence", "atsite", "pool", "regress", "estimate", "publish"]
+STAGES = [
+    "intake", "screen", "dependence", "atsite", "skew", "weight", "pool", "regress", "validate", "estimate", "publish",
+]  # fmt: skip
 FEW = {"simulations": 100, "close_call_simulations": 100, "growth_simulations": 100}
 """Few simulations: these tests are of the workflow, not of the numbers."""
 
 
 def stages_run(output: str) -> list[str]:
-    return re.findall(r"^\[\d of \d\] (\w+) \.\.\.$", output, re.MULTILINE)
+    return re.findall(r"^\[\d+ of \d+\] (\w+) \.\.\.$", output, re.MULTILINE)
 
 
 def tables(study: Path) -> dict[str, bytes]:
