@@ -23,7 +23,23 @@ MOVE = {"gauge_id": MOVED, "to": "south", "why": "drains to the other side of th
 PIN = {"pool": "south", "distribution": "GPA", "why": "as in the last study"}
 
 
-def lay_down(root, shuffle=None, regions=REGION, **pooling):
+TARGETS = {"T1": "north", "T2": "south", "T3": "nowhere"}
+LEDGER_COLUMNS = [
+    "date",
+    "by",
+    "subject",
+    "action",
+    "why",
+    "gauge_id",
+    "water_year",
+    "pool",
+    "value",
+    "evidence",
+    "effect",
+]
+
+
+def lay_down(root, shuffle=None, regions=REGION, ledger=(), without=(), **pooling):
     ids = sorted(regions)
     rng = np.random.default_rng(11)
     n = {gauge: 6 if gauge == SHORT else int(rng.integers(25, 50)) for gauge in ids}
@@ -44,13 +60,27 @@ def lay_down(root, shuffle=None, regions=REGION, **pooling):
             "centroid_latitude": 45 + 0.2 * np.arange(len(ids)),
             "centroid_longitude": 7.0,
             "region": [regions[gauge] for gauge in ids],
+            "area_km2": 100.0 * (1 + np.arange(len(ids)) % 7),
         }
     )
-    screened = pd.DataFrame({"gauge_id": ids, "used": [gauge != UNUSED for gauge in ids], "reasons": ""})
+    targets = pd.DataFrame(
+        {
+            "target_id": list(TARGETS),
+            "name": list(TARGETS),
+            "centroid_latitude": [45.5, 47.7, 49.5],
+            "centroid_longitude": 7.0,
+            "region": list(TARGETS.values()),
+            "area_km2": 250.0,
+        }
+    )
+    unused = {UNUSED, *without}
+    screened = pd.DataFrame({"gauge_id": ids, "used": [gauge not in unused for gauge in ids], "reasons": ""})
     if shuffle is not None:
         order = np.random.default_rng(shuffle).permutation(len(ids))
         sites, screened = sites.iloc[order], screened.iloc[order[::-1]]
     write_table(root / "work" / "intake" / "gauges.csv", sites)
+    write_table(root / "work" / "intake" / "targets.csv", targets)
+    write_table(root / "work" / "intake" / "ledger.csv", pd.DataFrame(list(ledger), columns=LEDGER_COLUMNS))
     write_table(root / "work" / "screen" / "gauges.csv", screened)
     model = {"a": 0.0, "b": 0.01, "form": "exponential", "minimum_common_years": 20, "pairs": 40}
     (root / "work" / "dependence" / "model.json").write_text(json.dumps(model), encoding="utf-8")

@@ -1,9 +1,11 @@
 # Pools of gauges, their tests, and a growth curve for each.
 rule pool:
     input:
-        records="work/screen/records.csv",
-        used="work/screen/gauges.csv",
-        gauges="work/intake/gauges.csv",
+        records=after_screen("records.csv"),
+        used=after_screen("gauges.csv"),
+        gauges=after_intake("gauges.csv"),
+        targets=after_intake("targets.csv"),
+        ledger=after_intake("ledger.csv"),
         dependence="work/dependence/model.json",
     output:
         contribution="work/pool/contribution.json",
@@ -14,7 +16,14 @@ rule pool:
         "../envs/python.yaml"
     params:
         settings=settings(
-            CONFIG, "pooling", "index_flood", "aeps", "confidence", "seed"
+            CONFIG,
+            "pooling",
+            "attributes",
+            "index_flood",
+            "aeps",
+            "confidence",
+            "seed",
+            "units",
         ),
         sources=source_digest("pool"),
     shell:

@@ -14,10 +14,14 @@ LCV_GRID = 0.8 * np.linspace(0.0, 1.0, 25) ** 1.5
 """Between-site standard deviation of L-CV over the pool's L-CV."""
 LSKEW_GRID = 0.3 * np.linspace(0.0, 1.0, 19) ** 1.5
 CORRELATION_GRID = np.array([0.25, 0.5, 0.75, 0.95])
-LCV_PRIOR_MEAN = 0.4
-"""Prior mean of the standard deviation of L-CV, over the pool's L-CV."""
-LSKEW_PRIOR_MEAN = (0.03, 1.5)
-"""Prior mean of the standard deviation of L-skew: a constant, and a multiple of that of L-CV."""
+SAME_LAW = 0.2
+"""Prior probability that the sites of a pool do not differ at all."""
+LCV_PRIOR_SCALE = 0.1
+"""Scale of the gamma prior (shape 2) of the standard deviation of L-CV, over the pool's L-CV."""
+LSKEW_PRIOR = (1.5, 0.6)
+"""Standard deviation of L-skew over that of L-CV: its prior median, and the standard deviation of its logarithm."""
+_LEAST = (0.002, 0.0015)
+"""Stand-ins for zero where logarithms are taken, L-CV and L-skew."""
 
 
 @dataclass(frozen=True)
@@ -63,6 +67,7 @@ def estimate_between_sites(
     years: Sequence[IntArray],
     correlation: FloatArray | None,
     simulated: SimulatedRatios,
+    answer: tuple[float, float] = (1.0, 1.0),
 ) -> BetweenSites:
     """Estimate the spread of true L-CV and L-skew between sites, net of sampling scatter.
 
@@ -78,6 +83,8 @@ def estimate_between_sites(
         Correlation of concurrent peaks; None for independent gauges.
     simulated : SimulatedRatios
         Simulated homogeneous regions of these gauges, from which the sampling covariance is taken.
+    answer : two floats
+        Change of the mean sample L-CV and L-skew for a unit change of the true ones.
 
     Notes
     -----
@@ -89,15 +96,15 @@ def estimate_between_sites(
     Kronecker structure, one eigendecomposition makes the likelihood a product of 2 x 2 blocks, and the
     common mean is integrated out (restricted likelihood).
 
+    A sample L-skew answers a true one with a slope below one (``answer``), which counts in the likelihood.
+
     A point estimate of Sigma is zero by chance in many pools whose sites do differ. As for the model-error
-    variance of regional skew (Reis, Stedinger and Martins, 2005, Water Resour. Res. 41) the posterior under
-    a weak prior is used instead: exponential for the standard deviation of L-CV with a mean of 0.4 of the
-    pool's L-CV; exponential for that of L-skew with a mean of 0.03 plus 1.5 times that of L-CV; uniform over
-    0.25 to 0.95 for the correlation. Spread and skew are tied because in log-normal and log-Pearson floods
-    the same differences between basins raise both, and because short records say little about L-skew.
-    With their mode at zero the priors let a homogeneous pool come near zero but not reach it. In simulated
-    regions 90 % intervals built on them hold 83 to 98 % of the true curves where sites differ, and nearly all
-    where they do not: no data of this size can tell the two apart with certainty.
+    variance of regional skew (Reis, Stedinger and Martins, 2005, Water Resour. Res. 41) the posterior is used
+    instead. The prior says with probability 0.2 that the sites share one law; otherwise the standard deviation
+    of L-CV is gamma distributed with shape 2 and scale 0.1 of the pool's L-CV, and that of L-skew is log-normal about
+    1.5 times it: in log-normal and log-Pearson floods the same differences between basins raise both, and
+    short records say little about L-skew. The correlation is uniform over 0.25 to 0.95. The constants
+    were set by the coverage of intervals in simulated regions (tests/benchmarks/coverage_growth.py).
     """
     sampling = _sampling_covariance(years, simulated)
     shared, vectors = np.linalg.eigh(shared_sampling(years, correlation))
@@ -106,15 +113,25 @@ def estimate_between_sites(
 
     lcv_sd, lskew_sd = LCV_GRID * average_lcv, LSKEW_GRID
     sd2, sd3, tie = np.meshgrid(lcv_sd, lskew_sd, CORRELATION_GRID, indexing="ij")
-    a, c, b = sd2[..., None] ** 2, sd3[..., None] ** 2, (tie * sd2 * sd3)[..., None]
+    seen2, seen3 = answer[0] * sd2[..., None], answer[1] * sd3[..., None]
+    a, c, b = seen2**2, seen3**2, tie[..., None] * seen2 * seen3
     likelihood = _log_restricted_likelihood(
         a + shared * sampling[0, 0], b + shared * sampling[0, 1], c + shared * sampling[1, 1], x, y
     )
-    prior = np.log(_cell_widths(lcv_sd))[:, None, None] + np.log(_cell_widths(lskew_sd))[None, :, None]
-    lskew_mean = LSKEW_PRIOR_MEAN[0] + LSKEW_PRIOR_MEAN[1] * sd2
-    prior = prior - sd2 / (LCV_PRIOR_MEAN * average_lcv) - sd3 / lskew_mean - np.log(lskew_mean)
-    probability = np.exp(likelihood + prior - (likelihood + prior).max())
+    prior = _prior(lcv_sd, lskew_sd, average_lcv)[:, :, None] / len(CORRELATION_GRID)
+    probability = np.exp(likelihood - likelihood.max()) * prior
     return BetweenSites(lcv_sd, lskew_sd, CORRELATION_GRID, probability / probability.sum())
+
+
+def _prior(lcv_sd: FloatArray, lskew_sd: FloatArray, average_lcv: float) -> FloatArray:
+    """Prior probability of the grid of standard deviations, (k, m)."""
+    sd2, sd3 = (np.maximum(sd, least) for sd, least in zip((lcv_sd, lskew_sd), _LEAST, strict=True))
+    of_lcv = sd2 * np.exp(-sd2 / (LCV_PRIOR_SCALE * average_lcv)) * _cell_widths(lcv_sd)
+    away = np.log(sd3[None, :] / (LSKEW_PRIOR[0] * sd2[:, None])) / LSKEW_PRIOR[1]
+    differing = of_lcv[:, None] * np.exp(-0.5 * away**2) / sd3 * _cell_widths(lskew_sd)
+    prior = (1 - SAME_LAW) * differing / differing.sum()
+    prior[0, 0] += SAME_LAW
+    return np.asarray(prior)
 
 
 def _sampling_covariance(years: Sequence[IntArray], simulated: SimulatedRatios) -> FloatArray:

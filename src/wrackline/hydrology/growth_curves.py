@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import ArrayLike
 
 from wrackline.hydrology.homogeneity import LARGEST_ACCEPTED_Z, FitMeasures
+from wrackline.hydrology.law_fits import fit_law
 from wrackline.hydrology.records import FloatArray, IntArray
 from wrackline.stats import distributions
 
@@ -131,7 +132,7 @@ def fit_curve(distribution: str, ratios: Ratios, statistic: Statistic) -> Growth
         When the law cannot have these ratios, or its median is not positive.
     """
     law = distributions.BY_NAME[distribution]
-    parameters = np.asarray(law.fit(1.0, *ratios), dtype=float)
+    parameters = fit_law(distribution, *ratios)
     if not np.isfinite(parameters).all() and distribution == "KAP":
         return fit_curve("GLO", ratios, statistic)
     if not np.isfinite(parameters).all():
@@ -184,12 +185,12 @@ def check_curve(curve: GrowthCurve, aep: FloatArray, largest_scaled_flood: float
     return doubts
 
 
-def largest_scaled_flood(flow: FloatArray, offsets: IntArray, statistic: Statistic) -> float:
-    """Return the largest peak of any gauge over that gauge's own index flood."""
-    largest = 0.0
-    for begin, end in pairwise(offsets.tolist()):
+def largest_scaled_floods(flow: FloatArray, offsets: IntArray, statistic: Statistic) -> FloatArray:
+    """Return the largest peak of every gauge over that gauge's own index flood, (g,); zero without an index."""
+    largest = np.zeros(len(offsets) - 1)
+    for i, (begin, end) in enumerate(pairwise(offsets.tolist())):
         record = flow[begin:end]
         index = float(np.median(record) if statistic == "median" else record.mean()) if len(record) else 0.0
         if index > 0:
-            largest = max(largest, float(record.max()) / index)
+            largest[i] = float(record.max()) / index
     return largest

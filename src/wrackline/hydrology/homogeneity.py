@@ -9,10 +9,10 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.special import log_ndtr
 
+from wrackline.hydrology.law_fits import fit_law
 from wrackline.hydrology.records import FloatArray, IntArray
 from wrackline.stats import distributions
 from wrackline.stats.copula import draw_sorted_records
-from wrackline.stats.distributions import glo, kappa
 from wrackline.stats.lmoments import order_weights
 from wrackline.stats.streams import random_stream
 
@@ -153,10 +153,10 @@ def fit_parent(lcv: float, lskew: float, lkurtosis: float) -> Parent:
     ValueError
         When the ratios belong to no law at all.
     """
-    parameters = np.asarray(kappa.fit(1.0, lcv, lskew, lkurtosis), dtype=float)
+    parameters = fit_law("KAP", lcv, lskew, lkurtosis)
     if np.isfinite(parameters).all():
         return Parent("kappa", parameters)
-    parameters = np.append(glo.fit(1.0, lcv, lskew), -1.0)
+    parameters = np.append(fit_law("GLO", lcv, lskew, lkurtosis), -1.0)
     if not np.isfinite(parameters).all():
         raise ValueError(f"no law has L-CV {lcv:.4g}, L-skew {lskew:.4g}, L-kurtosis {lkurtosis:.4g}")
     return Parent("GLO", parameters)

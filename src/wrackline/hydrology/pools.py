@@ -17,10 +17,14 @@ from wrackline.hydrology.growth_curves import (
     check_curve,
     choose_distribution,
     fit_curve,
-    growth_factors,
-    largest_scaled_flood,
+    largest_scaled_floods,
 )
-from wrackline.hydrology.growth_intervals import GrowthErrors, simulate_growth_errors
+from wrackline.hydrology.growth_intervals import (
+    GrowthErrors,
+    measure_answer,
+    simulate_growth_errors,
+    tabulate_family,
+)
 from wrackline.hydrology.homogeneity import (
     FitMeasures,
     Heterogeneity,
@@ -70,6 +74,8 @@ class Membership:
     ----------
     departure : (2, g)
         Mean square difference of true L-CV and L-skew between each gauge and the site, in the order of the records.
+    sampling : (2,) or None
+        Years times the sampling variance of L-CV and L-skew; None: from the pool's own average ratios.
     own : str
         The site's own gauge if it is a member; blank: the site is ungauged or left out.
     after_selection : bool
@@ -77,6 +83,7 @@ class Membership:
     """
 
     departure: FloatArray | None = None
+    sampling: FloatArray | None = None
     own: str = ""
     after_selection: bool = False
 
@@ -100,6 +107,8 @@ class PoolAnalysis:
     correlated : Heterogeneity or None
         H with correlated simulated regions; None when no correlation was given.
     fit_correlated : FitMeasures or None
+    largest_scaled : (g,)
+        Largest flood of every gauge over its index flood.
     curves : dict
         Growth factors (a,) by every law that could be fitted, by name.
     """
@@ -127,8 +136,12 @@ class PoolAnalysis:
     between: BetweenSites
     growth: GrowthErrors
     aep: FloatArray
-    largest_scaled_flood: float
+    largest_scaled: FloatArray
     statistic: Statistic
+
+    @property
+    def largest_scaled_flood(self) -> float:
+        return float(self.largest_scaled.max())
 
     @property
     def station_years(self) -> int:
@@ -214,17 +227,21 @@ def analyse_pool(
             weight_lskew, ratios[1], ratios[2], _first(growth_draws, settings.simulations)
         )
     growth_draws = _first(growth_draws, settings.growth_simulations)
-    between = estimate_between_sites(lm.t, lm.t3, ratios[0], years, matrix, growth_draws)
+    family = tabulate_family(parent)
+    answer = measure_answer(family, ratios, n, draws)
+    between = estimate_between_sites(lm.t, lm.t3, ratios[0], years, matrix, growth_draws, answer)
 
     aep = np.asarray(settings.aep, dtype=float)
     choice = choose_distribution(fit, float(heterogeneity.h[0]), pinned, why)
     curve = fit_curve(choice.distribution, ratios, settings.statistic)
     growth = simulate_growth_errors(
-        rng, (weight, weight_lskew), ratios, curve, choice, parent, fit, growth_draws, between, aep,
-        settings.statistic, settings.confidence, settings.rechoose, _number_of(membership.own, kept.gauge_ids),
+        rng, (weight, weight_lskew), ratios, curve, choice, family, fit, growth_draws, between, aep,
+        settings.statistic, settings.confidence, settings.rechoose, _number_of(membership.own, kept.gauge_ids), answer,
     )  # fmt: skip
-    largest = largest_scaled_flood(kept.flow_low, kept.offsets, settings.statistic)
-    warnings += warn_of_tests(heterogeneity, choice, parent, len(n)) + check_curve(curve, aep, largest)
+    largest = largest_scaled_floods(kept.flow_low, kept.offsets, settings.statistic)
+    warnings += warn_of_tests(heterogeneity, choice, parent, len(n)) + check_curve(
+        curve, aep, float(largest.max())
+    )
     return PoolAnalysis(
         gauge_ids=kept.gauge_ids,
         left_out=taken.left_out,
@@ -249,7 +266,7 @@ def analyse_pool(
         between=between,
         growth=growth,
         aep=aep,
-        largest_scaled_flood=largest,
+        largest_scaled=largest,
         statistic=settings.statistic,
     )
 
@@ -278,7 +295,9 @@ def _weigh(
     if membership.departure is None:
         return by_length, by_length
     departure = membership.departure[:, taken.order]
-    sampling = sampling_constants(fit_parent(*_average(lm, by_length, by_length)[:3]), lm.n, draws)
+    sampling = membership.sampling
+    if sampling is None:
+        sampling = sampling_constants(fit_parent(*_average(lm, by_length, by_length)[:3]), lm.n, draws)
     years = np.split(taken.records.water_year, taken.records.offsets[1:-1])
     shared = shared_sampling(years, matrix)
     first, second = (weigh_members(departure[i], lm.n, sampling[i], shared) for i in range(2))
@@ -297,11 +316,15 @@ def _second_opinion(
     kept: PeakRecords, ratios: Ratios, settings: PoolSettings, rng: np.random.Generator
 ) -> AndersonDarlingTest | None:
     """The test without a parent law, where floods are so skewed that H1 loses power."""
-    if ratios.lskew <= SKEWED or kept.n_gauges < 2:
+    if ratios.lskew <= SKEWED or kept.n_gauges < 2 or not settings.anderson_darling_replicates:
         return None
-    return bootstrap_homogeneity(
-        kept.flow_low, kept.offsets, rng, settings.anderson_darling_replicates, settings.statistic
-    )
+    try:
+        return bootstrap_homogeneity(
+            kept.flow_low, kept.offsets, rng, settings.anderson_darling_replicates, settings.statistic
+        )
+    except ValueError:
+        # a record without a positive index has no place in a test of scaled floods
+        return None
 
 
 def _test_pool(
@@ -333,9 +356,13 @@ def _first(simulated: SimulatedRatios, count: int) -> SimulatedRatios:
 
 
 def _all_curves(ratios: Ratios, aep: FloatArray, statistic: Statistic) -> dict[str, FloatArray]:
-    one = Ratios(*(np.array([ratio]) for ratio in ratios))
-    curves = {name: growth_factors(name, one, aep, statistic)[0] for name in distributions.BY_NAME}
-    return {name: factor for name, factor in curves.items() if np.isfinite(factor).all()}
+    curves = {}
+    for name in distributions.BY_NAME:
+        try:
+            curves[name] = fit_curve(name, ratios, statistic).factor(aep)
+        except ValueError:
+            continue
+    return curves
 
 
 def _tell_completed(taken: PoolRecords) -> list[str]:

@@ -24,7 +24,7 @@ def pool_style(number: int) -> tuple[str, str]:
 def number_gauges(pools: dict[str, PoolAnalysis]) -> dict[str, int]:
     """Number all pooled gauges from 1, in order of identifier: the figures' labels."""
     return {
-        gauge: i for i, gauge in enumerate(sorted(g for p in pools.values() for g in p.gauge_ids), start=1)
+        gauge: i for i, gauge in enumerate(sorted({g for p in pools.values() for g in p.gauge_ids}), start=1)
     }
 
 

@@ -247,20 +247,73 @@ class PinnedDistribution(_Part):
     why: str = Field(min_length=3)
 
 
+class HandPool(_Part):
+    """A pool that the analyst puts together gauge by gauge."""
+
+    pool: str = Field(min_length=1, description="Name of the pool.")
+    gauges: tuple[str, ...] = Field(min_length=1, description="Its gauges, by identifier.")
+    why: str = Field(min_length=3, description="The written reason; printed in the report.")
+
+
+class AttributeWeight(_Part):
+    """How much an attribute counts where the likeness of sites is measured."""
+
+    attribute: str = Field(description="Name of a declared attribute, or `area`.")
+    weight: float = Field(ge=0, description="Weight of the squared difference of the scaled attribute; 0: it does not count.")
+
+
+PoolingMethod = Literal["regions", "clusters", "influence"]
+
+
 class Pooling(_Part):
     """How gauges are pooled, tested and given a growth curve."""
 
+    method: PoolingMethod = Field(
+        "regions", description="`regions`: given ones; `clusters`: of attributes; `influence`: a pool of its own around every gauge and target."
+    )
+    compare: tuple[Literal["one", "regions", "clusters", "influence"], ...] = Field(
+        ("one", "regions", "clusters", "influence"), description="Ways of pooling compared by leave-one-out error; none: no comparison."
+    )
     regions: Literal["column", "polygons", "one"] = Field(
         "column", description="`column`: gauges.csv says; `polygons`: regions.gpkg says; `one`: all gauges together."
     )
-    moves: tuple[Move, ...] = Field((), description="Gauges moved between regions, with reasons.")
+    pools: tuple[HandPool, ...] = Field((), description="Pools put together by hand, which take their gauges out of the regions or clusters.")
+    moves: tuple[Move, ...] = Field((), description="Gauges moved between pools, with reasons; those of the ledger are added.")
+    attributes: tuple[str, ...] = Field(
+        (), description="Attributes that say how alike sites are; none named: `area` and every declared attribute known at all sites."
+    )
+    attribute_weights: tuple[AttributeWeight, ...] = Field((), description="Weights of attributes where they are not 1.")
+    distance_weight: float = Field(1.0, ge=0, description="Weight of the distance on the ground beside the attributes; 0: none.")
+    fit_weights: bool = Field(
+        False, description="Fit the weights of the attributes by leave-one-out error of growth factors (for regions of influence)."
+    )
+    clusters: int | None = Field(None, ge=1, description="Number of clusters; blank: by size and H, then labelled `after selection`.")
+    cluster_gauges: int = Field(20, ge=5, description="Gauges of a typical cluster (little is gained beyond 20).")
+    cluster_years: int = Field(500, ge=100, description="Station-years of a typical cluster.")
+    influence_years: int = Field(
+        500, ge=50, description="Station-years of a region of influence: five times the return period of interest."
+    )
+    influence_gauges: int = Field(8, ge=3, description="Gauges of a region of influence, at least.")
+    own_record: Literal["include", "leave_out"] = Field(
+        "include", description="Whether a gauge's own record is in its region of influence."
+    )
     distributions: tuple[PinnedDistribution, ...] = Field((), description="Distributions fixed for a pool, with reasons.")
     simulations: int = Field(1000, ge=100, description="Simulated regions for the heterogeneity and fit measures.")
     close_call_simulations: int = Field(
         10000, ge=100, description="Used when H lies within two simulation errors of 1 or 2."
     )
     growth_simulations: int = Field(1000, ge=100, description="Simulated regions for the growth-curve intervals.")
+    anderson_darling_replicates: int = Field(
+        500, ge=0, description="Replicates of the Anderson-Darling test of pools whose L-skew exceeds 0.23; 0: no test."
+    )
+    year_bootstrap: int = Field(
+        0, ge=0, description="Resamplings of whole water years over all gauges, as a second route to growth-curve errors; 0: none."
+    )
     minimum_peaks: int = Field(10, ge=8, description="Peaks a gauge needs to enter L-skew and L-kurtosis averages.")
+    validation_peaks: int = Field(20, ge=10, description="Peaks a gauge needs to be compared with in the leave-one-out comparison.")
+    sheets: tuple[str, ...] = Field(
+        (), description="Pools with a sheet of their own; none named: all regions or clusters, or the first regions of influence that ask for a look."
+    )
 
 
 class IndexFlood(_Part):
@@ -340,7 +393,11 @@ class StudyConfig(_Part):
 
     @model_validator(mode="after")
     def _attributes_exist(self) -> StudyConfig:
-        for part, names in (("index_flood", self.index_flood.attributes), ("regression", self.regression.attributes)):
+        for part, names in (
+            ("index_flood", self.index_flood.attributes),
+            ("regression", self.regression.attributes),
+            ("pooling", (*self.pooling.attributes, *(given.attribute for given in self.pooling.attribute_weights))),
+        ):
             unknown = [name for name in names if name != "area" and name not in self.attributes]
             if unknown:
                 raise ValueError(f"{part}.attributes names {unknown}, which `attributes` does not declare")

@@ -2,15 +2,24 @@
 
 from __future__ import annotations
 
+from typing import TYPE_CHECKING
+
 import numpy as np
 import pandas as pd
 
+from wrackline.hydrology.law_fits import fit_law
+from wrackline.hydrology.pool_suggestions import suggest
 from wrackline.hydrology.pools import PoolAnalysis
 from wrackline.hydrology.records import PeakRecords
 from wrackline.stats import distributions
 from wrackline.stats.lmoments import sample_lmoments
 from wrackline.study.config import StudyConfig
+from wrackline.study.pool_plans import PoolPlan
 from wrackline.study.tables import Column, Table
+
+if TYPE_CHECKING:
+    from wrackline.hydrology.pool_validation import PoolingScore
+    from wrackline.hydrology.records import FloatArray
 
 LMOMENT_COLUMNS = (
     Column("gauge_id", "text", "gauge"),
@@ -20,18 +29,20 @@ LMOMENT_COLUMNS = (
     Column("lskew", "", "L-skew, third L-moment over the second"),
     Column("lkurtosis", "", "L-kurtosis, fourth L-moment over the second"),
     Column("l5_ratio", "", "fifth L-moment over the second"),
-    Column("pool", "text", "pool of the gauge; blank: in no pool"),
+    Column("pool", "text", "pool that the gauge uses; blank: none"),
 )
 POOL_COLUMNS = (
     Column("pool", "text", "pool"),
     Column("gauge_id", "text", "gauge"),
-    Column("weight", "", "weight in the pool's averages; they sum to one"),
+    Column("weight", "", "weight in the pool's average of L-CV; they sum to one"),
     Column("discordancy", "", "discordancy D (Hosking and Wallis, 1993)"),
     Column("critical", "", "critical value of D for the pool's number of gauges"),
     Column("discordant", "true/false", "whether D exceeds it"),
     Column("robust_distance", "", "distance from the robust centre; above 3.06 asks for a second look"),
     Column("second_look", "true/false", "whether the robust distance asks for a second look"),
-    Column("remark", "text", "why a gauge has no weight, or was moved"),
+    Column("remark", "text", "why a gauge has no weight, was moved, or had its low floods completed"),
+    Column("weight_lskew", "", "weight in the averages of L-skew and higher ratios; they sum to one"),
+    Column("h1_without", "", "H1 of the pool without the gauge, by the same simulated regions"),
 )
 TEST_COLUMNS = (
     Column("pool", "text", "pool"),
@@ -57,6 +68,49 @@ TEST_COLUMNS = (
     Column("lkurtosis", "", "average L-kurtosis"),
     Column("between_lcv_sd", "", "posterior mean of the standard deviation of true L-CV between sites"),
     Column("between_lskew_sd", "", "posterior mean of the standard deviation of true L-skew between sites"),
+    Column(
+        "anderson_darling",
+        "",
+        "k-sample Anderson-Darling statistic; blank: L-skew is 0.23 or less, no second opinion asked",
+    ),
+    Column(
+        "anderson_darling_probability",
+        "fraction",
+        "share of resampled homogeneous pools below it; above 0.95 speaks against one law",
+    ),
+    Column("after_selection", "true/false", "whether H had a say in who is a member, so that it is no test"),
+)
+SUGGESTION_COLUMNS = (
+    Column("pool", "text", "pool"),
+    Column("gauge_id", "text", "gauge that asks for a look; nothing was done"),
+    Column("kinds", "text", "discordant, second_look, drives_h, short, suspicious_flood"),
+    Column("h1", "", "H1 of the pool"),
+    Column("h1_without", "", "H1 of the pool without the gauge"),
+    Column("suggestion", "text", "what was seen"),
+)
+VALIDATION_COLUMNS = (
+    Column("method", "text", "way of pooling; `one`: all gauges together"),
+    Column("aep", "fraction", "annual exceedance probability"),
+    Column("n_gauges", "count", "gauges predicted without themselves"),
+    Column("bias", "ln", "mean of ln predicted over own growth factor, weighted by record length"),
+    Column("rmse", "ln", "root mean square of the same"),
+    Column("own_sampling", "ln", "root mean square sampling error of the gauges' own factors, part of rmse"),
+    Column("net_error", "ln", "pooled uncertainty measure net of the gauges' own sampling error"),
+    Column("net_error_se", "ln", "standard error of net_error, gauges left out one at a time"),
+    Column(
+        "covered",
+        "fraction",
+        "share of own factors within the interval, their own sampling error allowed for",
+    ),
+    Column("used", "true/false", "whether the study pools this way"),
+)
+TRIAL_COLUMNS = (
+    Column("n_clusters", "count", "number of clusters tried"),
+    Column("smallest_gauges", "count", "gauges of the smallest cluster"),
+    Column("smallest_years", "count", "station-years of the cluster with the fewest"),
+    Column("mean_h1", "", "H1 averaged over gauges; it has a say, so the chosen clusters' H is no test"),
+    Column("fit_to_size", "true/false", "whether the clusters have the size wanted"),
+    Column("chosen", "true/false", "whether this number was taken"),
 )
 DISTRIBUTION_COLUMNS = (
     Column("pool", "text", "pool"),
@@ -82,6 +136,12 @@ GROWTH_COLUMNS = (
     Column("ln_sd_region", "ln", "the same against the region's average curve"),
     Column("lowest_accepted", "", "smallest growth factor among the accepted laws"),
     Column("highest_accepted", "", "largest growth factor among the accepted laws"),
+    Column(
+        "bootstrap_lower",
+        "",
+        "lower bound of the pool's average curve by resampled water years; blank: not asked for",
+    ),
+    Column("bootstrap_upper", "", "upper bound of the same"),
 )
 
 
@@ -89,30 +149,46 @@ def build_tables(
     config: StudyConfig,
     records: PeakRecords,
     pools: dict[str, PoolAnalysis],
-    pool_of_gauge: dict[str, str],
-    moves: dict[str, str],
+    plan: PoolPlan,
+    scores: tuple[PoolingScore, ...] = (),
+    bootstraps: dict[str, FloatArray] | None = None,
 ) -> tuple[Table, ...]:
-    """Build the five tables; records are those of all used gauges, in order of identifier."""
-    return (
-        Table("gauge_lmoments", lmoment_rows(config, records, pool_of_gauge), LMOMENT_COLUMNS),
-        _table(
-            "pools", POOL_COLUMNS, [row for name in pools for row in member_rows(name, pools[name], moves)]
-        ),
-        _table("pool_tests", TEST_COLUMNS, [test_row(name, pool) for name, pool in pools.items()]),
-        _table(
-            "pool_distributions",
+    """Build the tables; records are those of all used gauges, in order of identifier."""
+    bootstraps = bootstraps or {}
+    rows = {
+        "pools": (POOL_COLUMNS, [r for name in pools for r in member_rows(name, pools[name], plan.moves)]),
+        "pool_tests": (TEST_COLUMNS, [test_row(name, pool) for name, pool in pools.items()]),
+        "pool_distributions": (
             DISTRIBUTION_COLUMNS,
-            [row for name, pool in pools.items() for row in distribution_rows(name, pool)],
+            [r for name, pool in pools.items() for r in distribution_rows(name, pool)],
         ),
-        _table(
-            "growth_curves",
+        "growth_curves": (
             GROWTH_COLUMNS,
-            [row for name, pool in pools.items() for row in growth_rows(name, pool)],
+            [r for name, pool in pools.items() for r in growth_rows(name, pool, bootstraps.get(name))],
         ),
+        "pool_suggestions": (SUGGESTION_COLUMNS, [r for name, pool in pools.items() for r in suggestion_rows(name, pool)]),
+        "pool_validation": (
+            VALIDATION_COLUMNS,
+            [
+                (s.method, s.aep, s.n_gauges, s.bias, s.rmse, s.own_sampling, s.net, s.net_se, s.covered, s.method == plan.method)
+                for s in scores
+            ],
+        ),
+    }  # fmt: skip
+    if plan.clusters is not None and plan.clusters.trials:
+        chosen = len(plan.clusters.centre)
+        trials = [
+            (*(getattr(t, c.name) for c in TRIAL_COLUMNS[:-1]), t.n_clusters == chosen)
+            for t in plan.clusters.trials
+        ]
+        rows["pool_cluster_trials"] = (TRIAL_COLUMNS, trials)
+    return (
+        Table("gauge_lmoments", lmoment_rows(config, records, plan.home), LMOMENT_COLUMNS),
+        *(_table(name, columns, found) for name, (columns, found) in rows.items()),
     )
 
 
-def lmoment_rows(config: StudyConfig, records: PeakRecords, pool_of_gauge: dict[str, str]) -> pd.DataFrame:
+def lmoment_rows(config: StudyConfig, records: PeakRecords, home: dict[str, str]) -> pd.DataFrame:
     """A row per used gauge; blank ratios where the record is too short for them."""
     exact = records.keep_rows(records.systematic_exact)
     lm = sample_lmoments(exact.flow_low, exact.offsets)
@@ -125,7 +201,7 @@ def lmoment_rows(config: StudyConfig, records: PeakRecords, pool_of_gauge: dict[
             "lskew": lm.t3,
             "lkurtosis": lm.t4,
             "l5_ratio": lm.t5,
-            "pool": [pool_of_gauge[gauge] for gauge in records.gauge_ids],
+            "pool": [home[gauge] for gauge in records.gauge_ids],
         }
     )
 
@@ -136,13 +212,15 @@ def member_rows(name: str, pool: PoolAnalysis, moves: dict[str, str]) -> list[tu
     rows = {
         gauge: (
             name, gauge, pool.weight[i], found.measure[i], found.critical, bool(found.discordant[i]),
-            found.robust_distance[i], bool(found.robust_discordant[i]), moves.get(gauge, ""),
+            found.robust_distance[i], bool(found.robust_discordant[i]),
+            "; ".join(filter(None, (pool.completed.get(gauge, ""), moves.get(gauge, "")))),
+            pool.weight_lskew[i], pool.h1_without[i],
         )
         for i, gauge in enumerate(pool.gauge_ids)
     }  # fmt: skip
     for gauge, reason in pool.left_out.items():
         remark = "; ".join(filter(None, (f"left out of the averages: {reason}", moves.get(gauge, ""))))
-        rows[gauge] = (name, gauge, 0.0, np.nan, found.critical, False, np.nan, False, remark)
+        rows[gauge] = (name, gauge, 0.0, np.nan, found.critical, False, np.nan, False, remark, 0.0, np.nan)
     return [rows[gauge] for gauge in sorted(rows)]
 
 
@@ -153,6 +231,8 @@ def test_row(name: str, pool: PoolAnalysis) -> tuple:
         name, len(pool.gauge_ids), pool.station_years, *h.h, correlated.h[0] if correlated else np.nan,
         h.n_simulations, pool.verdict, *h.h_se, correlated.h_se[0] if correlated else np.nan,
         pool.parent.name, *pool.ratios[:3], pool.between.mean_lcv_sd, pool.between.mean_lskew_sd,
+        *((pool.second_opinion.statistic, pool.second_opinion.probability) if pool.second_opinion else (np.nan, np.nan)),
+        pool.after_selection,
     )  # fmt: skip
 
 
@@ -164,7 +244,7 @@ def distribution_rows(name: str, pool: PoolAnalysis) -> list[tuple]:
         tested = law_name in pool.fit.names
         at = pool.fit.names.index(law_name) if tested else 0
         parameters = np.full(5, np.nan)
-        fitted = np.asarray(law.fit(1.0, lcv, lskew, lkurtosis, l5), dtype=float)
+        fitted = fit_law(law_name, lcv, lskew, lkurtosis, l5)
         parameters[: len(fitted)] = fitted
         chosen = law_name == pool.curve.distribution
         rows.append(
@@ -180,7 +260,12 @@ def distribution_rows(name: str, pool: PoolAnalysis) -> list[tuple]:
     return rows
 
 
-def growth_rows(name: str, pool: PoolAnalysis) -> list[tuple]:
+def suggestion_rows(name: str, pool: PoolAnalysis) -> list[tuple]:
+    """A row per gauge that asks for a look."""
+    return [(name, s.gauge_id, " ".join(s.kinds), s.h1, s.h1_without, s.words) for s in suggest(pool)]
+
+
+def growth_rows(name: str, pool: PoolAnalysis, bootstrap: FloatArray | None = None) -> list[tuple]:
     """A row per probability, from often to rare."""
     accepted = np.array([pool.curves[law] for law in pool.accepted if law in pool.curves])
     none = np.full(len(pool.aep), np.nan)
@@ -194,6 +279,7 @@ def growth_rows(name: str, pool: PoolAnalysis) -> list[tuple]:
         growth.ln_sd_region,
         lowest,
         highest,
+        *((none, none) if bootstrap is None else bootstrap),
     )
     return [
         (name, pool.curve.distribution, aep, *values) for aep, *values in zip(pool.aep, *columns, strict=True)
