@@ -158,7 +158,9 @@ def fit_skew_model(
     """
     weighted = posterior_of_model_variance(turn_system(stations.skew, design, stations.variance), prior_rate)
     w = 1.0 / (weighted.mean + stations.variance)
-    weights = np.linalg.solve(design.T @ (w[:, None] * design), (w[:, None] * design).T)
+    weights = np.asarray(
+        np.linalg.solve(design.T @ (w[:, None] * design), (w[:, None] * design).T), dtype=float
+    )
     coefficients = weights @ stations.skew
 
     system = turn_system(stations.skew, design, stations.covariance)
@@ -191,7 +193,9 @@ def fit_skew_model(
         residuals=stations.skew - fitted,
         leave_one_out=loo,
         leave_one_out_variance=loo_variance,
-        leave_one_out_log_density=score_left_out(stations.skew, design, np.linalg.inv(cover)),
+        leave_one_out_log_density=score_left_out(
+            stations.skew, design, np.asarray(np.linalg.inv(cover), dtype=float)
+        ),
     )
 
 

@@ -121,8 +121,9 @@ def fit_skew_surface(
     """
     if ranges_km is None:
         ranges_km = np.array(RANGE_SHARES) * distance_km.max()
-    root = np.linalg.cholesky(stations.covariance)
-    y, x = np.linalg.solve(root, stations.skew), np.linalg.solve(root, design)
+    root = np.asarray(np.linalg.cholesky(stations.covariance), dtype=float)
+    y = np.asarray(np.linalg.solve(root, stations.skew), dtype=float)
+    x = np.asarray(np.linalg.solve(root, design), dtype=float)
     best: tuple[float, float, float] | None = None
     for range_km in ranges_km:
         evidence, variance = _evidence(root, y, x, spatial_correlation(distance_km, range_km), prior_rate)
@@ -137,8 +138,9 @@ def surface_evidence(
     stations: StationSkews, design: FloatArray, distance_km: FloatArray, prior_rate: float = 10.0
 ) -> float:
     """Return the log evidence of a surface over that of uncorrelated model errors, averaged over the ranges."""
-    root = np.linalg.cholesky(stations.covariance)
-    y, x = np.linalg.solve(root, stations.skew), np.linalg.solve(root, design)
+    root = np.asarray(np.linalg.cholesky(stations.covariance), dtype=float)
+    y = np.asarray(np.linalg.solve(root, stations.skew), dtype=float)
+    x = np.asarray(np.linalg.solve(root, design), dtype=float)
     found = [
         _evidence(root, y, x, spatial_correlation(distance_km, range_km), prior_rate)[0]
         for range_km in (0.0, *(np.array(RANGE_SHARES) * distance_km.max()))
@@ -178,8 +180,8 @@ def _surface_at(
     evidence: float,
 ) -> SkewSurface:
     shared = variance * spatial_correlation(distance_km, range_km)
-    precision = np.linalg.inv(shared + stations.covariance)
-    covariance = np.linalg.inv(design.T @ precision @ design)
+    precision = np.asarray(np.linalg.inv(shared + stations.covariance), dtype=float)
+    covariance = np.asarray(np.linalg.inv(design.T @ precision @ design), dtype=float)
     coefficients = covariance @ (design.T @ (precision @ stations.skew))
     mean, spread = _leave_one_out(stations.skew, design, shared, precision, variance)
     return SkewSurface(

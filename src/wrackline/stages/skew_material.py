@@ -194,4 +194,4 @@ def transforms_of(config: StudyConfig) -> dict[str, str]:
 def outside_ranges(values: FloatArray, lower: FloatArray, upper: FloatArray, room: float = 1e-9) -> BoolArray:
     """Tell which rows (m, k) lie outside the ranges of the gauges in any column; NaN is outside."""
     slack = room * (1 + np.abs(upper - lower))
-    return ~((values >= lower - slack) & (values <= upper + slack)).all(axis=1)
+    return np.asarray(~((values >= lower - slack) & (values <= upper + slack)).all(axis=1), dtype=bool)

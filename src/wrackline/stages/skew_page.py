@@ -246,6 +246,7 @@ def _candidate_rows(frame: pd.DataFrame) -> PageTable:
     def number(value: Any, digits: int) -> str:
         return "" if pd.isna(value) else f"{value:.{digits}f}"
 
+    candidates: list[Any] = list(frame.itertuples())
     rows = tuple(
         (
             row.model + (" (in use)" if row.in_use else ""),
@@ -259,7 +260,7 @@ def _candidate_rows(frame: pd.DataFrame) -> PageTable:
             number(row.log_score_gain, 1),
             row.remark,
         )
-        for row in frame.itertuples()
+        for row in candidates
     )
     head = (
         "model", "model-error variance", "AVP new", "AVP old", "effective years", "pseudo R²", "b / s.e.",
@@ -287,6 +288,7 @@ def _steering_rows(frame: pd.DataFrame) -> tuple[PageTable, ...]:
     if steer.empty:
         return ()
     steer = steer.sort_values(["influence", "gauge_id"], ascending=[False, True]).head(MOST_ROWS)
+    gauges: list[Any] = list(steer.itertuples())
     rows = tuple(
         (
             row.gauge_id,
@@ -296,7 +298,7 @@ def _steering_rows(frame: pd.DataFrame) -> tuple[PageTable, ...]:
             f"{row.leverage:.3f}",
             "" if pd.isna(row.influence) else f"{row.influence:.3f}",
         )
-        for row in steer.itertuples()
+        for row in gauges
     )
     head = ("gauge", "pseudo record, years", "skew", "residual", "leverage", "influence")
     return (PageTable("Gauges with high leverage or influence.", head, rows, "tables/skew_gauges.csv"),)

@@ -194,7 +194,7 @@ def _gauge_table(
 
 
 def _candidate_table(comparison: Comparison) -> pd.DataFrame:
-    rows = []
+    rows: list[tuple[Any, ...]] = []
     for c in comparison.candidates:
         ratios = np.abs(c.ratios[1:]) if c.plan.kind == "regression" else np.array([np.nan])
         rows.append(
