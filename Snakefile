@@ -21,7 +21,15 @@ from study_folder import (
     read_study,
 )
 from telling import hush, tell_failure, tell_results
-from wiring import FAILED, STAGES, prepare_shell, settings, source_digest, stage_caller
+from wiring import (
+    FAILED,
+    STAGES,
+    prepare_shell,
+    settings,
+    source_digest,
+    stage_caller,
+    stages_of,
+)
 
 min_version("9.20")
 
@@ -32,13 +40,14 @@ else:
     STUDY = find_study(workflow, default=HERE / "example_region" / "study.yaml")
 CONFIG = read_study(STUDY)
 RESULTS = CONFIG.output.replace("{", "{{").replace("}", "}}")
+RUN_STAGES = stages_of(CONFIG)
 
 if workflow.is_main_process:
     if not AS_MODULE:
         hush(workflow.dryrun, STUDY.parent / CONFIG.output)
     lock_study(STUDY.parent)
     if not workflow.dryrun:
-        forget_damaged(STUDY.parent, STAGES, CONFIG.output)
+        forget_damaged(STUDY.parent, RUN_STAGES, CONFIG.output)
         (STUDY.parent / FAILED).unlink(missing_ok=True)
 prepare_shell()
 stage_call = stage_caller(config["study_file"] if AS_MODULE else STUDY.name)
@@ -58,6 +67,7 @@ rule all:
         manifest=f"{RESULTS}/manifest.json",
 
 
+include: "workflow/rules/common.smk"
 include: "workflow/rules/intake.smk"
 include: "workflow/rules/screen.smk"
 include: "workflow/rules/dependence.smk"
@@ -69,6 +79,11 @@ include: "workflow/rules/regress.smk"
 include: "workflow/rules/validate.smk"
 include: "workflow/rules/estimate.smk"
 include: "workflow/rules/publish.smk"
+
+
+if CONFIG.editions.previous:
+
+    include: "workflow/rules/compare.smk"
 
 
 onsuccess:

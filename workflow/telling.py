@@ -11,6 +11,7 @@ from wiring import FAILED
 CHATTER = (
     "Assuming unrestricted shared filesystem",
     "Building DAG of jobs",
+    "Updating checkpoint dependencies",
     "Using shell:",
     "Select jobs to execute",
     "Execute ",

@@ -45,13 +45,22 @@ def stage_caller(study: str) -> Callable[[str], str]:
     study = shlex.quote(study).replace("{", "{{").replace("}", "}}")
 
     def stage_call(stage: str) -> str:
-        place = f"[{STAGES.index(stage) + 1} of {len(STAGES)}] {stage} ..."
+        place = (
+            f"[{STAGES.index(stage) + 1} of {len(STAGES)}] {stage} ..."
+            if stage in STAGES
+            else f"[beside] {stage} ..."
+        )
         return (
             f"echo '{place}'; PYTHONPATH=\"$WRACKLINE_SOURCES\" python -P -m {PACKAGE}.stages.{stage} {study}"
             f' 2>&1 | tee {{log:q}} || {{{{ echo {stage} >> "$(dirname {{log:q}})"/failed; exit 1; }}}}'
         )
 
     return stage_call
+
+
+def stages_of(config: Any) -> tuple[str, ...]:
+    """Stages of a study, in order; `compare` where the study names a previous edition."""
+    return (*STAGES[:-1], "compare", STAGES[-1]) if config.editions.previous else STAGES
 
 
 def prepare_shell() -> None:

@@ -1,10 +1,10 @@
 # Floods at gauges: every record fitted by itself, and what to check about the fit.
 rule atsite:
     input:
-        records="work/intake/records.csv",
-        gauges="work/intake/gauges.csv",
-        ledger="work/intake/ledger.csv",
-        used="work/screen/gauges.csv",
+        records=after_intake("records.csv"),
+        gauges=after_intake("gauges.csv"),
+        ledger=after_intake("ledger.csv"),
+        used=after_screen("gauges.csv"),
     output:
         contribution="work/atsite/contribution.json",
         moments="work/atsite/moments.csv",

@@ -1,9 +1,9 @@
 # How floods at two gauges go together, as a function of distance.
 rule dependence:
     input:
-        records="work/screen/records.csv",
-        used="work/screen/gauges.csv",
-        gauges="work/intake/gauges.csv",
+        records=after_screen("records.csv"),
+        used=after_screen("gauges.csv"),
+        gauges=after_intake("gauges.csv"),
     output:
         contribution="work/dependence/contribution.json",
         model="work/dependence/model.json",

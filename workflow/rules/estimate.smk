@@ -1,11 +1,11 @@
 # Floods at the gauges and at the ungauged targets, and the models saved for sites to come.
 rule estimate:
     input:
-        records="work/screen/records.csv",
-        used="work/screen/gauges.csv",
-        gauges="work/intake/gauges.csv",
-        targets="work/intake/targets.csv",
-        ledger="work/intake/ledger.csv",
+        records=after_screen("records.csv"),
+        used=after_screen("gauges.csv"),
+        gauges=after_intake("gauges.csv"),
+        targets=after_intake("targets.csv"),
+        ledger=after_intake("ledger.csv"),
         dependence="work/dependence/model.json",
         station="work/atsite/moments.csv",
         skew="work/skew/sites.csv",

@@ -1,11 +1,7 @@
 # The study's files become checked records, sites and polygons; faults end the run here.
-rule intake:
+checkpoint intake:
     input:
-        lambda wildcards: [
-            name
-            for name in CONFIG.inputs.model_dump().values()
-            if name and (STUDY.parent / name).is_file()
-        ],
+        input_files,
     output:
         contribution="work/intake/contribution.json",
         records="work/intake/records.csv",

@@ -2,12 +2,12 @@
 # until the new ones are whole, hence `update`.
 rule publish:
     input:
-        contributions=expand("work/{stage}/contribution.json", stage=STAGES[:-1]),
-        gauges="work/intake/gauges.csv",
-        targets="work/intake/targets.csv",
-        basins="work/intake/basins.csv",
-        regions="work/intake/regions.csv",
-        records="work/screen/records.csv",
+        contributions=expand("work/{stage}/contribution.json", stage=RUN_STAGES[:-1]),
+        gauges=after_intake("gauges.csv"),
+        targets=after_intake("targets.csv"),
+        basins=after_intake("basins.csv"),
+        regions=after_intake("regions.csv"),
+        records=after_screen("records.csv"),
         skew_map="work/skew/skew.tif",
         skew_cells="work/skew/skew_cells.csv",
         skew_contours="work/skew/skew_contours.csv",

@@ -1,10 +1,10 @@
 # The index flood and the floods of every probability as functions of catchment attributes.
 rule regress:
     input:
-        records="work/screen/records.csv",
-        used="work/screen/gauges.csv",
-        gauges="work/intake/gauges.csv",
-        targets="work/intake/targets.csv",
+        records=after_screen("records.csv"),
+        used=after_screen("gauges.csv"),
+        gauges=after_intake("gauges.csv"),
+        targets=after_intake("targets.csv"),
         dependence="work/dependence/model.json",
         station="work/atsite/moments.csv",
         skew="work/skew/sites.csv",

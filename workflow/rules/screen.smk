@@ -1,13 +1,13 @@
 # Every record is tested; what is used, and why, is settled here.
-rule screen:
+checkpoint screen:
     input:
-        records="work/intake/records.csv",
-        gauges="work/intake/gauges.csv",
-        basins="work/intake/basins.csv",
-        accounting="work/intake/accounting.csv",
-        ledger="work/intake/ledger.csv",
-        periods="work/intake/periods.csv",
-        redundancy="work/intake/redundancy.csv",
+        records=after_intake("records.csv"),
+        gauges=after_intake("gauges.csv"),
+        basins=after_intake("basins.csv"),
+        accounting=after_intake("accounting.csv"),
+        ledger=after_intake("ledger.csv"),
+        periods=after_intake("periods.csv"),
+        redundancy=after_intake("redundancy.csv"),
     output:
         contribution="work/screen/contribution.json",
         gauges="work/screen/gauges.csv",

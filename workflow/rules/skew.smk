@@ -2,12 +2,12 @@
 rule skew:
     input:
         moments="work/atsite/moments.csv",
-        records="work/intake/records.csv",
-        gauges="work/intake/gauges.csv",
-        targets="work/intake/targets.csv",
-        basins="work/intake/basins.csv",
-        regions="work/intake/regions.csv",
-        used="work/screen/gauges.csv",
+        records=after_intake("records.csv"),
+        gauges=after_intake("gauges.csv"),
+        targets=after_intake("targets.csv"),
+        basins=after_intake("basins.csv"),
+        regions=after_intake("regions.csv"),
+        used=after_screen("gauges.csv"),
         dependence="work/dependence/model.json",
         given=[CONFIG.skew.given_map] if CONFIG.skew.source == "map" else [],
     output:

@@ -1,9 +1,9 @@
 # Every gauge estimated as if it were ungauged: which route is trusted, and whether intervals hold what they promise.
 rule validate:
     input:
-        records="work/screen/records.csv",
-        used="work/screen/gauges.csv",
-        gauges="work/intake/gauges.csv",
+        records=after_screen("records.csv"),
+        used=after_screen("gauges.csv"),
+        gauges=after_intake("gauges.csv"),
         dependence="work/dependence/model.json",
         station="work/atsite/moments.csv",
         skew="work/skew/sites.csv",

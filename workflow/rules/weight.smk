@@ -4,8 +4,8 @@ rule weight:
         moments="work/atsite/moments.csv",
         gauge_moments="work/atsite/gauge_moments.csv",
         gauge_estimates="work/atsite/gauge_estimates.csv",
-        records="work/intake/records.csv",
-        used="work/screen/gauges.csv",
+        records=after_intake("records.csv"),
+        used=after_screen("gauges.csv"),
         skew="work/skew/sites.csv",
     output:
         contribution="work/weight/contribution.json",

@@ -31,6 +31,7 @@ READING_ORDER = (
     "regression",
     "validation",
     "estimates",
+    "change",
     "appendices",
 )
 """Section keys in the order a reviewer reads; other keys stand before the estimates."""

@@ -27,7 +27,7 @@ CAUSE_WORDS = {
     "configuration": "choices in the configuration",
 }
 CHANGE_COLUMNS = (
-    Column("site", "text", "gauge or target"),
+    Column("site_id", "text", "gauge or target"),
     Column("kind", "text", "gauge or target"),
     Column("aep", "fraction", "annual exceedance probability"),
     Column("old_flow", "flow", "flood that the old edition adopted"),
@@ -68,7 +68,7 @@ def comparison_tables(found: Comparison) -> tuple[Table, ...]:
     )
     p = len(found.keys.aeps)
     head = {
-        "site": np.repeat(np.array(ids, dtype=object), p),
+        "site_id": np.repeat(np.array(ids, dtype=object), p),
         "kind": np.repeat(np.array(kinds, dtype=object), p),
         "aep": np.tile(np.array(found.keys.aeps, dtype=float), len(ids)),
     }

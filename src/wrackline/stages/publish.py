@@ -27,7 +27,13 @@ from wrackline.study.faults import Fault, sort_faults
 from wrackline.study.gis import Layer, write_geopackage
 from wrackline.study.handover import read_records, read_sites
 from wrackline.study.provenance import MANIFEST, PAGE, build_manifest, digest_file, written_files
-from wrackline.study.published import StageOutput, column_table, read_stages, warning_table
+from wrackline.study.published import (
+    StageOutput,
+    column_table,
+    read_stages,
+    stages_to_publish,
+    warning_table,
+)
 from wrackline.study.study_layers import skew_layers, study_layers
 from wrackline.study.tables import Column, Table, write_table, write_text
 
@@ -85,7 +91,7 @@ def run(study: StudyFiles) -> str:
 
 
 def _gather(study: StudyFiles) -> Material:
-    stages = read_stages(study.work, study.study_file.name)
+    stages = read_stages(study.work, study.study_file.name, stages_to_publish(study.config))
     intake, screen = study.work("intake"), study.work("screen")
     gauges = read_sites(intake / "gauges.csv").sort_values("gauge_id", ignore_index=True)
     path = screen / "records.csv"
@@ -235,7 +241,9 @@ def _page_data(
     study: StudyFiles, material: Material, folder: Path, layers: Mapping[str, Layer]
 ) -> dict[str, Any]:
     """What the page's scripts show; peaks of all gauges that were read, also of those left out."""
-    records = read_records(study.work("intake") / "records.csv", material.gauges["gauge_id"].tolist())
+    path = study.work("intake") / "records.csv"
+    ids = material.gauges["gauge_id"].tolist()
+    records = read_records(path, ids) if path.is_file() else material.records
     return build_page_data(
         study.config,
         material.tables,

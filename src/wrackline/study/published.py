@@ -24,6 +24,7 @@ STAGE_ORDER = (
     "regress",
     "validate",
     "estimate",
+    "compare",
 )
 COLUMNS_COLUMNS = (
     Column("table", "text", "name of the table: the file's name without its ending"),
@@ -72,7 +73,14 @@ class StageOutput:
         ]
 
 
-def read_stages(work: Callable[[str], Path], study_name: str) -> list[StageOutput]:
+def stages_to_publish(config: StudyConfig) -> tuple[str, ...]:
+    """Stages whose contributions are published: a comparison only where the study still names a previous edition."""
+    return STAGE_ORDER if config.editions.previous else STAGE_ORDER[:-1]
+
+
+def read_stages(
+    work: Callable[[str], Path], study_name: str, stages: tuple[str, ...] = STAGE_ORDER
+) -> list[StageOutput]:
     """Read the contribution of every stage that has run, in the order of the study.
 
     Raises
@@ -84,7 +92,7 @@ def read_stages(work: Callable[[str], Path], study_name: str) -> list[StageOutpu
     """
     found = [
         StageOutput(work(stage), read_contribution(work(stage)))
-        for stage in STAGE_ORDER
+        for stage in stages
         if (work(stage) / "contribution.json").is_file()
     ]
     if not found:
