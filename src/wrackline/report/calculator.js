@@ -6,8 +6,9 @@ const calculator = (() => {
   const unit = study.units, percent = `${Math.round(100 * settings.confidence)}\u202f%`;
   const NUMBER = /^[-+]?(\d+\.?\d*|\.\d+)(e[-+]?\d+)?$/i;
   const equations = [models.index_flood, models.quantiles].filter(Boolean);
-  const byRegion = settings.pooling.regions !== "one";
-  const regions = Object.keys(models.growth).sort();
+  const pooled = models.pooling_method === "regions" ? Object.keys(models.growth) : [...equations.flatMap((one) => one.regions), ...(models.skew_model?.regions ?? [])];
+  const regions = settings.pooling.regions === "one" ? [] : [...new Set(pooled)].sort();
+  const byRegion = regions.length > 0;
   const gauges = Object.keys(models.gauges);
   const needsPlace = models.skew_model?.kind === "surface";
   const skewAttributes = (models.skew_model?.attributes ?? []).filter((name) => name !== "area");

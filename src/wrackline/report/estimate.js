@@ -191,23 +191,42 @@ const estimateSite = (() => {
     }
   }
 
+  /** The pool whose growth curve a site takes: its region's, its own, or that of the gauge most like it. */
+  function poolOf(models, site) {
+    if (models.pooling_method === "regions") return [site.region, []];
+    const own = models.home[site.id];
+    const at = models.index_flood.attributes.map((name, i) => TRANSFORMS[models.index_flood.transforms[i]](valueOf(site, name)));
+    const known = Object.entries(models.gauges).filter(([, gauge]) => gauge.pool);
+    if (own !== undefined || !known.length || !finite(at)) return [own ?? "", []];
+    const scale = at.map((_, i) => {
+      const values = known.map(([, gauge]) => gauge.place[i]), middle = mean(values);
+      return Math.max(Math.sqrt(mean(values.map((value) => (value - middle) ** 2))), 1e-12);
+    });
+    const apart = ([, gauge]) => gauge.place.reduce((sum, value, i) => sum + ((value - at[i]) / scale[i]) ** 2, 0);
+    const distances = known.map(apart);
+    const [id, gauge] = known[distances.indexOf(Math.min(...distances))];
+    return [gauge.pool, [`its growth curve is that of gauge ${id}, the gauge most like it`]];
+  }
+
   /** Rows {aep, route, flow, lower, upper, se_log10, adopted, warnings} of one site, flows in the declared unit. */
   return function estimateSite(models, site, flowUnit) {
     const aeps = models.settings.aeps.targets;
-    const name = models.settings.pooling.regions === "one" ? "all" : site.region;
+    if (models.settings.pooling.regions === "one") site = { ...site, region: "all" };
+    const [name, borrowed] = poolOf(models, site);
     const pool = Object.hasOwn(models.growth, name) ? models.growth[name] : null;
-    const poolName = pool ? name : "";
-    const index = place(models.index_flood, site, poolName, models.index_flood.coefficient_covariance[0]);
+    const group = models.pooling_method === "regions" ? (pool ? name : "") : site.region;
+    const index = place(models.index_flood, site, group, models.index_flood.coefficient_covariance[0]);
     let notes = index.notes;
     const routes = { growth_curve: byGrowthCurve(predict(models.index_flood, [0], index.x), pool, aeps) };
     if (models.quantiles) {
       const rows = aeps.map((p) => models.quantiles.aeps.indexOf(p));
-      const own = place(models.quantiles, site, poolName, models.quantiles.coefficient_covariance[rows[0]]);
+      const own = place(models.quantiles, site, group, models.quantiles.coefficient_covariance[rows[0]]);
       notes = [...new Set([...notes, ...own.notes])];
       routes.quantile_regression = predict(models.quantiles, rows, own.x);
       if (models.routes.combination) routes.routes_combined = combine(models.routes, routes.growth_curve, routes.quantile_regression, aeps);
     }
     notePool(notes, name, pool, Math.min(...aeps));
+    notes.push(...borrowed);
     const has = (route) => routes[route] && finite(routes[route].y) && finite(routes[route].variance);
     const regional = [models.routes.adopted, ...ROUTES].find(has);
     if (regional) {

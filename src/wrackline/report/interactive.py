@@ -13,7 +13,7 @@ import numpy as np
 from wrackline.report.style import INK, MUTED, RISING, TWO_SIDED, WATER
 
 MAP_HEIGHT, CURVE_HEIGHT, YEARS_HEIGHT = 540, 400, 220
-LABELLED_AEPS = (0.9, 0.5, 0.2, 0.1, 0.04, 0.02, 0.01, 0.005, 0.002, 0.001, 0.0001)
+LABELLED_AEPS = (0.9, 0.5, 0.2, 0.1, 0.04, 0.01, 0.002, 0.0001)
 
 
 def frame_items(data: Mapping[str, Any]) -> list[dict[str, Any]]:
@@ -57,7 +57,11 @@ def _figure(name: str, height: int, x_range: Any, y_range: Any, tools: Sequence[
     )  # fmt: skip
     for axis in (*frame.xaxis, *frame.yaxis):
         axis.update(axis_line_color=MUTED, major_tick_line_color=MUTED, minor_tick_line_color=None)
-        axis.update(major_label_text_font_size="12px", axis_label_text_font_size="12.5px", axis_label_text_font_style="normal")
+        axis.update(
+            major_label_text_font_size="12px",
+            axis_label_text_font_size="12.5px",
+            axis_label_text_font_style="normal",
+        )
     return frame
 
 
@@ -74,19 +78,62 @@ def _hover(renderer: Any, name: str) -> Any:
 
 
 def _map(skew: Mapping[str, Any] | None) -> Any:
-    from bokeh.models import PanTool, Range1d, TapTool, WheelZoomTool
+    from bokeh.models import PanTool, PrintfTickFormatter, Range1d, TapTool, WheelZoomTool
 
     pan, zoom = PanTool(), WheelZoomTool(modifiers={"ctrl": True}, zoom_on_axis=False)
     frame = _figure("map", MAP_HEIGHT, Range1d(0, 1), Range1d(0, 1), [pan, zoom], lod_threshold=None)
     frame.toolbar.active_drag, frame.toolbar.active_scroll = pan, zoom
     frame.grid.visible = False
+    for axis in (*frame.xaxis, *frame.yaxis):
+        axis.ticker.desired_num_ticks = 4
+        axis.formatter = PrintfTickFormatter(format="%g°")
+    frame.min_border_left = 52
     for band, palette in (("skew", TWO_SIDED), ("mse", RISING)):
         _add_surface(frame, band, palette, skew)
-    frame.patches("xs", "ys", source=_source("basins", xs=[], ys=[]), name="basins", fill_color=WATER, fill_alpha=0.05, line_color=MUTED, line_alpha=0.7, line_width=0.7)
-    frame.patches("xs", "ys", source=_source("regions", xs=[], ys=[]), name="regions", fill_color=None, line_color=INK, line_alpha=0.8, line_width=1.6, line_dash=[6, 3])
-    frame.scatter("x", "y", source=_source("ring", x=[], y=[]), name="ring", size=24, fill_color=None, line_color=INK, line_width=2.5)
+    frame.patches(
+        "xs",
+        "ys",
+        source=_source("basins", xs=[], ys=[]),
+        name="basins",
+        fill_color=WATER,
+        fill_alpha=0.05,
+        line_color=MUTED,
+        line_alpha=0.7,
+        line_width=0.7,
+    )
+    frame.patches(
+        "xs",
+        "ys",
+        source=_source("regions", xs=[], ys=[]),
+        name="regions",
+        fill_color=None,
+        line_color=INK,
+        line_alpha=0.8,
+        line_width=1.6,
+        line_dash=[6, 3],
+    )
+    frame.scatter(
+        "x",
+        "y",
+        source=_source("ring", x=[], y=[]),
+        name="ring",
+        size=24,
+        fill_color=None,
+        line_color=INK,
+        line_width=2.5,
+    )
     columns: dict[str, Any] = {name: [] for name in ("x", "y", "fill", "line", "marker", "size", "label")}
-    sites = frame.scatter("x", "y", source=_source("sites", **columns), name="sites", marker="marker", size="size", fill_color="fill", line_color="line", line_width=1)
+    sites = frame.scatter(
+        "x",
+        "y",
+        source=_source("sites", **columns),
+        name="sites",
+        marker="marker",
+        size="size",
+        fill_color="fill",
+        line_color="line",
+        line_width=1,
+    )
     sites.nonselection_glyph = None
     sites.selection_glyph = None
     frame.add_tools(TapTool(renderers=[sites]), _hover(sites, "site hover"))
@@ -107,7 +154,9 @@ def _add_surface(frame: Any, band: str, palette: Sequence[str], skew: Mapping[st
         low, high = -max(abs(low), abs(high), 1e-3), max(abs(low), abs(high), 1e-3)
     elif high <= low:
         low, high = low * 0.9 - 1e-6, high * 1.1 + 1e-6
-    mapper = LinearColorMapper(name=f"{band} colours", palette=list(palette), low=low, high=high, nan_color="rgba(0,0,0,0)")
+    mapper = LinearColorMapper(
+        name=f"{band} colours", palette=list(palette), low=low, high=high, nan_color="rgba(0,0,0,0)"
+    )
     frame.image(
         "image", "x", "y", "dw", "dh", color_mapper=mapper, name=f"{band} surface", alpha=0.75, visible=False,
         source=_source(
@@ -130,11 +179,45 @@ def _curve(aeps: Sequence[Mapping[str, Any]]) -> Any:
     )  # fmt: skip
     frame.xaxis.ticker = FixedTicker(ticks=sorted(places))
     frame.xaxis.major_label_overrides = {place: text for place, text in places.items()}
-    frame.varea("x", "lower", "upper", source=_source("band", x=[], lower=[], upper=[]), name="band", fill_alpha=0.2, fill_color=WATER)
-    frame.multi_line("xs", "ys", source=_source("lines", xs=[], ys=[], colour=[], width=[], dash=[]), name="lines", line_color="colour", line_width="width", line_dash="dash")
-    frame.segment("z", "low", "z", "high", source=_source("spans", z=[], low=[], high=[]), name="spans", line_color=INK, line_width=1.2)
+    frame.varea(
+        "x",
+        "lower",
+        "upper",
+        source=_source("band", x=[], lower=[], upper=[]),
+        name="band",
+        fill_alpha=0.2,
+        fill_color=WATER,
+    )
+    frame.multi_line(
+        "xs",
+        "ys",
+        source=_source("lines", xs=[], ys=[], colour=[], width=[], dash=[]),
+        name="lines",
+        line_color="colour",
+        line_width="width",
+        line_dash="dash",
+    )
+    frame.segment(
+        "z",
+        "low",
+        "z",
+        "high",
+        source=_source("spans", z=[], low=[], high=[]),
+        name="spans",
+        line_color=INK,
+        line_width=1.2,
+    )
     columns: dict[str, Any] = {name: [] for name in ("z", "flow", "marker", "fill", "label")}
-    peaks = frame.scatter("z", "flow", source=_source("peaks", **columns), name="peaks", marker="marker", fill_color="fill", line_color=INK, size=7)
+    peaks = frame.scatter(
+        "z",
+        "flow",
+        source=_source("peaks", **columns),
+        name="peaks",
+        marker="marker",
+        fill_color="fill",
+        line_color=INK,
+        size=7,
+    )
     frame.add_tools(_hover(peaks, "peak hover"))
     return frame
 
@@ -143,12 +226,48 @@ def _years() -> Any:
     """Peaks by water year, with the floods that would have left no record shaded."""
     from bokeh.models import NumeralTickFormatter, Range1d
 
-    frame = _figure("years", YEARS_HEIGHT, Range1d(1900, 2000), Range1d(0, 1), [], x_axis_label="water year", y_axis_label="flow")
+    frame = _figure(
+        "years",
+        YEARS_HEIGHT,
+        Range1d(1900, 2000),
+        Range1d(0, 1),
+        [],
+        x_axis_label="water year",
+        y_axis_label="flow",
+    )
     frame.xaxis.formatter = NumeralTickFormatter(format="0")
     frame.xgrid.visible = False
-    frame.quad(left="left", right="right", bottom="bottom", top="top", source=_source("unseen", left=[], right=[], bottom=[], top=[]), name="unseen", fill_alpha=0.35, fill_color=MUTED, line_color=None)
-    frame.segment("year", "low", "year", "high", source=_source("stems", year=[], low=[], high=[]), name="stems", line_color=WATER, line_width=1.3)
+    frame.quad(
+        left="left",
+        right="right",
+        bottom="bottom",
+        top="top",
+        source=_source("unseen", left=[], right=[], bottom=[], top=[]),
+        name="unseen",
+        fill_alpha=0.35,
+        fill_color=MUTED,
+        line_color=None,
+    )
+    frame.segment(
+        "year",
+        "low",
+        "year",
+        "high",
+        source=_source("stems", year=[], low=[], high=[]),
+        name="stems",
+        line_color=WATER,
+        line_width=1.3,
+    )
     columns: dict[str, Any] = {name: [] for name in ("year", "flow", "marker", "fill", "label")}
-    dots = frame.scatter("year", "flow", source=_source("dots", **columns), name="dots", marker="marker", fill_color="fill", line_color=INK, size=6)
+    dots = frame.scatter(
+        "year",
+        "flow",
+        source=_source("dots", **columns),
+        name="dots",
+        marker="marker",
+        fill_color="fill",
+        line_color=INK,
+        size=6,
+    )
     frame.add_tools(_hover(dots, "year hover"))
     return frame

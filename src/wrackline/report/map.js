@@ -226,6 +226,8 @@ const studyMap = (() => {
       if (source.selected.indices.length) onPick(source.selected.indices[0]);
     });
     paintSites();
+    const tall = ((bounds.y[1] - bounds.y[0]) * stretch()) / Math.max(bounds.x[1] - bounds.x[0], 1e-6);
+    frames.map.figure.height = Math.round(Math.max(380, Math.min(620, tall * (frames.map.figure.inner_width || 450) * 1.05 + 40)));
     whole();
     let width = frames.map.figure.inner_width;
     frames.map.figure.properties.inner_width.change.connect(() => {

@@ -16,7 +16,9 @@ from wrackline.study.tables import Table
 RARE = 0.01
 
 
-def map_views(config: StudyConfig, tables: Mapping[str, Table], layers: Mapping[str, Layer]) -> list[dict[str, Any]]:
+def map_views(
+    config: StudyConfig, tables: Mapping[str, Table], layers: Mapping[str, Layer]
+) -> list[dict[str, Any]]:
     """Views of the sites, in the order in which the map offers them; one value per site, gauges first.
 
     A view is ``{key, label, kind, values, note}``: kind ``groups`` (names), ``rising`` (numbers from little to
@@ -31,18 +33,41 @@ def map_views(config: StudyConfig, tables: Mapping[str, Table], layers: Mapping[
         if any(names):
             views.append({"key": key, "label": label, "kind": "groups", "note": note, "values": names})
 
-    def numbers(key: str, label: str, kind: str, note: str, values: dict[str, float], at_targets: dict[str, float] | None = None) -> None:
+    def numbers(
+        key: str,
+        label: str,
+        kind: str,
+        note: str,
+        values: dict[str, float],
+        at_targets: dict[str, float] | None = None,
+    ) -> None:
         at = [values.get(site, np.nan) for site in gauge_ids]
         at += [(at_targets or {}).get(site, np.nan) for site in target_ids]
         if np.isfinite(at).any():
-            views.append({"key": key, "label": label, "kind": kind, "note": note, "values": round_values(np.array(at), 3)})
+            views.append(
+                {
+                    "key": key,
+                    "label": label,
+                    "kind": kind,
+                    "note": note,
+                    "values": round_values(np.array(at), 3),
+                }
+            )
 
     region = gauges["region"].tolist()
     groups("region", "Region", "Regions as the inputs name them.", region, targets["region"].tolist())
     if "pool" in gauges and gauges["pool"].tolist() != region:
         groups("pool", "Pool", "The pool whose growth curve a gauge shares.", gauges["pool"].tolist(), [])
     if not views:
-        views.append({"key": "sites", "label": "Sites", "kind": "groups", "note": "All sites.", "values": ["all"] * (len(gauge_ids) + len(target_ids))})
+        views.append(
+            {
+                "key": "sites",
+                "label": "Sites",
+                "kind": "groups",
+                "note": "All sites.",
+                "values": ["all"] * (len(gauge_ids) + len(target_ids)),
+            }
+        )
     rare = _rare(config)
     word = f"{format_aep(rare)} AEP"
     numbers("unit_flood", f"Flood of {word} per area, {format_unit(config.units.flow)} per {format_unit(config.units.area)}", "rising",
@@ -65,9 +90,9 @@ def map_views(config: StudyConfig, tables: Mapping[str, Table], layers: Mapping[
             _column(tables, "skew_sites", "generalized_skew", key="site_id", kind="target"))  # fmt: skip
     numbers("discordancy", "Discordancy in the pool", "rising", "High values do not go with the other gauges of the pool.",
             _column(tables, "pools", "discordancy"))  # fmt: skip
-    numbers("change", f"Change since the last edition at {word}, %", "two_sided", "How the adopted flood moved between the two editions.",
-            _column(tables, "edition_changes", "change_percent", key="site_id", aep=rare),
-            _column(tables, "edition_changes", "change_percent", key="site_id", aep=rare))  # fmt: skip
+    numbers("change", f"Change since the last edition at {word}, %", "two_sided", "How the adopted flood moved since the edition that this run is compared with.",
+            _column(tables, "changes", "change_percent", key="site_id", kind="gauge", aep=rare),
+            _column(tables, "changes", "change_percent", key="site_id", kind="target", aep=rare))  # fmt: skip
     return views
 
 
@@ -83,7 +108,9 @@ def _judged_route(tables: Mapping[str, Table]) -> str:
     return str((frame["log10_error"] ** 2).groupby(frame["route"]).mean().idxmin())
 
 
-def _column(tables: Mapping[str, Table], table: str, column: str, *, key: str = "gauge_id", **where: Any) -> dict[str, float]:
+def _column(
+    tables: Mapping[str, Table], table: str, column: str, *, key: str = "gauge_id", **where: Any
+) -> dict[str, float]:
     """Values by site of the rows in which the other columns have the wanted values; empty where there are none."""
     if table not in tables or column not in tables[table].frame:
         return {}
@@ -101,4 +128,8 @@ def _unit_floods(table: Table | None, key: str, aep: float, sites: Any) -> dict[
     frame = table.frame
     frame = frame[frame["adopted"].eq(True) & (frame["aep"] == aep)]
     area = dict(zip(sites[key].astype(str), sites["area"].astype(float), strict=True))
-    return {str(site): float(flow) / area[str(site)] for site, flow in zip(frame[key], frame["flow"], strict=True) if area.get(str(site), 0) > 0}
+    return {
+        str(site): float(flow) / area[str(site)]
+        for site, flow in zip(frame[key], frame["flow"], strict=True)
+        if area.get(str(site), 0) > 0
+    }

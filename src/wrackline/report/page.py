@@ -213,7 +213,13 @@ def _embedded(data: Mapping[str, Any] | None) -> dict[str, Any]:
 
     names = ["page_base.js", "tables.js"]
     if data is None:
-        return {"data": Markup("null"), "frames": None, "library": "", "scripts": _scripts(names), "calculator": False}
+        return {
+            "data": Markup("null"),
+            "frames": None,
+            "library": "",
+            "scripts": _scripts(names),
+            "calculator": False,
+        }
     if data["calculator"]:
         names += ["estimate.js", "calculator.js"]
     names += ["frames.js", "map.js", "site.js", "search.js"]
@@ -259,7 +265,9 @@ def _contents(page: StudyPage) -> list[tuple[str, str]]:
     entries += [("glance", "At a glance")]
     entries += [("map-section", "Map and sites")] if page.data else []
     entries += [(f"section-{section.key}", section.title) for section in page.sections]
-    entries += [("calculator", "Calculator for ungauged sites")] if page.data and page.data["calculator"] else []
+    entries += (
+        [("calculator", "Calculator for ungauged sites")] if page.data and page.data["calculator"] else []
+    )
     entries += [("warnings", "Warnings"), ("cautions", "Cautions"), ("methods", "Methods")]
     entries += [("provenance", "Provenance and citation"), ("peaks", "Peaks used")]
     return entries + ([("ledger", "Ledger of decisions")] if page.ledger else [])

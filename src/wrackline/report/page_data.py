@@ -73,20 +73,26 @@ def build_page_data(
         },
         "confidence": config.confidence,
         "aeps": [{"p": aep, "z": round(float(-ndtri(aep)), 4), "text": format_aep(aep)} for aep in aeps],
-        "sites": _sites(config, tables, gauges, targets, layers, centre),
+        "sites": _sites(config, gauges, targets, layers, models, centre),
         "views": map_views(config, tables, layers),
         "palettes": {"two_sided": TWO_SIDED, "rising": RISING},
         "looks": [group_look(number) for number in range(24)],
         "floods": {
             **flood_curves(tables.get("gauge_estimates"), "gauge_id", "source"),
-            **{"t:" + site: found for site, found in flood_curves(tables.get("target_estimates"), "target_id", "route").items()},
+            **{
+                "t:" + site: found
+                for site, found in flood_curves(tables.get("target_estimates"), "target_id", "route").items()
+            },
         },
         "peaks": peaks_of_gauges(config, records, tables),
         "fact_labels": labels,
         "facts": facts,
         "notes": site_notes(tables),
         "pools": members_of_pools(tables),
-        "outlines": {name: _outlines(layers.get(name), key, centre) for name, key in (("basins", "site_id"), ("regions", "region"))},
+        "outlines": {
+            name: _outlines(layers.get(name), key, centre)
+            for name, key in (("basins", "site_id"), ("regions", "region"))
+        },
         "skew": _skew_grid(skew_map, centre),
         "calculator": _calculator(models),
     }
@@ -95,24 +101,33 @@ def build_page_data(
 def embed_json(content: Any) -> str:
     """Render JSON for a script element of the page: no character in it can end the element or open another."""
     text = json.dumps(content, ensure_ascii=False, separators=(",", ":"), allow_nan=False)
-    for character, code in (("<", "\\u003c"), (">", "\\u003e"), ("&", "\\u0026"), ("\u2028", "\\u2028"), ("\u2029", "\\u2029")):
+    for character, code in (
+        ("<", "\\u003c"),
+        (">", "\\u003e"),
+        ("&", "\\u0026"),
+        ("\u2028", "\\u2028"),
+        ("\u2029", "\\u2029"),
+    ):
         text = text.replace(character, code)
     return text
 
 
 def _sites(
     config: StudyConfig,
-    tables: Mapping[str, Table],
     gauges: pd.DataFrame,
     targets: pd.DataFrame,
     layers: Mapping[str, Layer],
+    models: Mapping[str, dict[str, Any]],
     centre: float,
 ) -> dict[str, list[Any]]:
     """Gauges, then targets, as columns; ``kind`` is g or t."""
     used = layers["gauges"].frame.set_index("gauge_id")["standing"].eq("used")
     pools = layers["gauges"].frame.set_index("gauge_id")
     pool_of = pools["pool"].to_dict() if "pool" in pools else {}
-    columns: dict[str, list[Any]] = {name: [] for name in ("kind", "id", "name", "lon", "lat", "area", "region", "pool", "used")}
+    home = models.get("saved_models", {}).get("home", {})
+    columns: dict[str, list[Any]] = {
+        name: [] for name in ("kind", "id", "name", "lon", "lat", "area", "region", "pool", "used")
+    }
     for kind, key, frame in (("g", "gauge_id", gauges), ("t", "target_id", targets)):
         ids = frame[key].astype(str).tolist()
         columns["kind"] += [kind] * len(ids)
@@ -122,7 +137,11 @@ def _sites(
         columns["lat"] += np.round(frame["latitude"].to_numpy(dtype=float), 5).tolist()
         columns["area"] += round_values(frame["area_km2"].to_numpy(dtype=float) / config.area_in_km2)
         columns["region"] += [_text(value) for value in frame["region"]]
-        columns["pool"] += [_text(pool_of.get(site, "")) for site in ids] if kind == "g" else [_text(value) for value in frame["region"]]
+        region = dict(zip(ids, columns["region"][-len(ids) :] if ids else [], strict=True))
+        columns["pool"] += [
+            _text(pool_of.get(site, "")) if kind == "g" else _text(home.get(site, region[site]))
+            for site in ids
+        ]
         columns["used"] += [bool(used.get(site, True)) for site in ids] if kind == "g" else [True] * len(ids)
     return columns
 
@@ -140,7 +159,9 @@ def _outlines(layer: Layer | None, key: str, centre: float) -> list[list[Any]]:
             if part is None or part.is_empty:
                 continue
             ring = np.asarray(part.exterior.coords)[:, :2]
-            steps = np.round(np.column_stack([unwrap(ring[:, 0], centre), ring[:, 1]]) / GRID).astype(np.int64)
+            steps = np.round(np.column_stack([unwrap(ring[:, 0], centre), ring[:, 1]]) / GRID).astype(
+                np.int64
+            )
             found.append([name, np.vstack([steps[:1], np.diff(steps, axis=0)]).ravel().tolist()])
     return found
 
@@ -188,7 +209,11 @@ def _calculator(models: Mapping[str, dict[str, Any]]) -> dict[str, Any] | None:
 def _shorten(value: Any) -> Any:
     """Drop what the calculator does not read, and digits beyond `MODEL_DIGITS`."""
     if isinstance(value, dict):
-        return {key: _shorten(part) for key, part in value.items() if key not in ("diagnostics", "own_coefficients", "gauges_in_model")}
+        return {
+            key: _shorten(part)
+            for key, part in value.items()
+            if key not in ("diagnostics", "own_coefficients", "gauges_in_model")
+        }
     if isinstance(value, list):
         return [_shorten(part) for part in value]
     return float(f"{value:.{MODEL_DIGITS}g}") if isinstance(value, float) else value

@@ -20,7 +20,9 @@ def describe_question(config: StudyConfig, n_gauges: int, n_targets: int) -> tup
         )
     else:
         found.append(f"Floods are wanted for annual exceedance probabilities of {at_gauges}")
-    found[-1] += f", in {format_unit(config.units.flow)}, each with the interval that holds {format_percent(config.confidence)} of the probability."
+    found[-1] += (
+        f", in {format_unit(config.units.flow)}, each with the interval that holds {format_percent(config.confidence)} of the probability."
+    )
     return tuple(found)
 
 

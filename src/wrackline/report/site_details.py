@@ -11,8 +11,8 @@ from scipy.special import ndtri
 
 from wrackline.hydrology.records import PeakRecords
 from wrackline.report.rounding import format_significant
-from wrackline.study.published import declared_unit
 from wrackline.study.config import StudyConfig
+from wrackline.study.published import declared_unit
 from wrackline.study.tables import Table
 
 DIGITS = 4
@@ -37,7 +37,10 @@ SCREENING_FACTS = (
 
 def round_values(values: np.ndarray, digits: int = DIGITS) -> list[float | None]:
     """Round to significant digits for the page; None where there is no finite number."""
-    return [float(f"{value:.{digits}g}") if np.isfinite(value) else None for value in np.asarray(values, dtype=float)]
+    return [
+        float(f"{value:.{digits}g}") if np.isfinite(value) else None
+        for value in np.asarray(values, dtype=float)
+    ]
 
 
 def flood_curves(table: Table | None, key: str, route: str) -> dict[str, dict[str, Any]]:
@@ -188,7 +191,11 @@ def members_of_pools(tables: Mapping[str, Table]) -> dict[str, str]:
         pool = str(row["pool"])
         parts = [f"{int(row['n_gauges'])} gauges, {int(row['station_years'])} station-years"]
         if pd.notna(row["h1"]):
-            parts.append(f"H1 {row['h1']:.2f} ({str(row['verdict']).partition(';')[0].replace('_', ' ')})".replace("-", "\u2212"))
+            parts.append(
+                f"H1 {row['h1']:.2f} ({str(row['verdict']).partition(';')[0].replace('_', ' ')})".replace(
+                    "-", "\u2212"
+                )
+            )
         if pool in chosen:
             parts.append(f"distribution {chosen[pool]}")
         found[pool] = "; ".join(parts)

@@ -2,7 +2,7 @@
 "use strict";
 
 (() => {
-  const FILTER_FROM = 6;
+  const FILTER_FROM = 11;
 
   const textOf = (cell) => cell.textContent.trim();
 
