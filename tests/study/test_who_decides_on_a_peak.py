@@ -10,6 +10,7 @@ from typing import Any
 import numpy as np
 import pytest
 
+from wrackline.study.faults import StudyFaults
 from wrackline.study.inputs import Study, read_study
 
 P = "peaks.csv"
@@ -146,6 +147,19 @@ def test_silent_years_of_a_threshold_stayed_below_it(small_study: Any, tmp_path:
     assert known(study, "00101", 1961) is None
     assert 20 == (~study.records.observed).sum()
     assert 1 == study.records.historic.sum()
+
+
+def test_years_that_have_not_come_are_not_taken_as_years_without_a_flood(
+    small_study: Any, tmp_path: Path
+) -> None:
+    latest = max(int(row[1]) for row in small_study.tables[P][1:])
+    small_study.add("thresholds.csv", gauge_id="00106", first_year="1980", last_year=str(latest), low="90")
+    small_study.add("thresholds.csv", gauge_id="00105", first_year="1980", last_year="2040", low="90")
+    with pytest.raises(StudyFaults) as told:
+        read(small_study, tmp_path)
+    assert [("threshold_beyond_peaks", 4)] == [
+        (fault.code, fault.row) for fault in told.value.problems if fault.file == "thresholds.csv"
+    ]
 
 
 def test_an_excluded_peak_does_not_become_a_silent_year(small_study: Any, tmp_path: Path) -> None:

@@ -74,6 +74,7 @@ def build_records(
     missing row and the year gets none.
     """
     effects = [""] * len(ledger.row)
+    _check_spans_have_passed(thresholds, peaks, len(gauge_ids), config, log)
     years = _threshold_years(thresholds, ledger, config, effects)
     at_threshold = find_keys(years.key, peaks.key)
     verdicts = _by_defaults(peaks, at_threshold >= 0)
@@ -95,6 +96,31 @@ def build_records(
         _accounting(gauge_ids, peaks, verdicts),
         ledger.frame.assign(effect=effects),
     )
+
+
+def _check_spans_have_passed(
+    thresholds: Thresholds, peaks: Peaks, n_gauges: int, config: StudyConfig, log: FaultLog
+) -> None:
+    """Report spans that reach beyond every peak: their silent years would count as years without a flood.
+
+    A gauge by itself may well end in silent years; where no gauge of a study has a peak, the year has not come yet.
+    """
+    if not len(peaks.every_key):
+        return
+    latest = int((peaks.every_key % YEAR_STEP).max())
+    early = (thresholds.last_year > latest) & (thresholds.low > 0) & np.isinf(thresholds.high)
+    tell = log.problem if n_gauges > 1 else log.warning
+    for at in np.flatnonzero(early):
+        tell(
+            "threshold_beyond_peaks",
+            config.inputs.thresholds,
+            f"The span ends after {latest}, the last water year of any peak; the years after it would be taken as "
+            "years without a flood above the threshold.",
+            f"End the span in {latest}, or in the last year of which that is known.",
+            row=thresholds.row[at],
+            column="last_year",
+            value=str(thresholds.last_year[at]),
+        )
 
 
 def _threshold_years(
