@@ -111,11 +111,13 @@ class AttributeSpace:
                 if value[name] < low or value[name] > high
             ]
             if not beyond:
-                beyond = [
-                    f"{one} and {other} are each within the gauges' range, but not together"
+                pairs = [
+                    f"{one} with {other}"
                     for (one, other), hull in self.hulls.items()
                     if lies_outside(hull, value[one], value[other])
                 ]
+                if pairs:
+                    beyond = [f"within the gauges' range one by one, but not together: {', '.join(pairs)}"]
             if not beyond and own_spread > self.largest_spread:
                 beyond = ["its attributes are each within the gauges' range, but not all together"]
             found.append(beyond)

@@ -129,10 +129,15 @@ def _regional_routes(
         design, more = _place(equations, targets, group)
         notes = [list(dict.fromkeys(a + b)) for a, b in zip(notes, more, strict=True)]
         quantile = RoutePredictions(*equations.predict(design), equations.degrees_of_freedom)
+    found = _Notes(notes)
     for i, name in enumerate(pool):
-        _note_pool(notes[i], name, models["growth"], min(config.aeps.targets))
+        of_pool = _note_pool(name, models["growth"], min(config.aeps.targets))
+        if not name:
+            notes[i][:0] = of_pool
+        elif of_pool:
+            found.route[i, "growth_curve"], found.route[i, "routes_combined"] = of_pool, list(of_pool)
     routes = estimate_regional(by_growth, quantile, read_combination(models["routes"], aeps))
-    return routes, _Notes(notes)
+    return routes, found
 
 
 def _place(
@@ -149,16 +154,16 @@ def _place(
     return design, notes
 
 
-def _note_pool(notes: list[str], name: str, pools: dict[str, Any], rarest: float) -> None:
+def _note_pool(name: str, pools: dict[str, Any], rarest: float) -> list[str]:
+    """What to know of a site's pool before its growth curve is used."""
     if not name:
-        notes.insert(0, "the site is in no pool, so it has no growth curve")
-        return
-    if pools[name]["heterogeneous"]:
-        notes.append(f"pool {name} is heterogeneous")
+        return ["the site is in no pool, so it has no growth curve"]
+    notes = [f"pool {name} is heterogeneous"] if pools[name]["heterogeneous"] else []
     if pools[name]["station_years"] < 1.0 / rarest:
         notes.append(
             f"pool {name} has {pools[name]['station_years']} station-years, fewer than 1/AEP of the rarest floods"
         )
+    return notes
 
 
 def _regional_choice(models: dict[str, Any], routes: dict[str, RoutePredictions], at: int) -> str | None:
