@@ -89,12 +89,30 @@ def fit_combination(
     square = (difference**2 * share).sum(axis=1)
     own = float(cross.sum() / max(square.sum(), 1e-300))
     se = float(np.sqrt(((cross - own * square) ** 2).sum()) / max(square.sum(), 1e-300))
-    precision, prior = 1.0 / max(se, 1e-6) ** 2, 1.0 / WEIGHT_SD**2
-    weight = float(np.clip((own * precision + EVEN * prior) / (precision + prior), 0.0, 1.0))
+    weight = settle_weight(own, se)
     first, second = growth.variance[there].mean(axis=0), quantile.variance[there].mean(axis=0)
     shared = 0.5 * (first + second - (difference**2).mean(axis=0))
     correlation = np.clip(shared / np.sqrt(first * second), 0.0, 0.999)
     return Combination(weight, own, se, correlation)
+
+
+def settle_weight(own: float, se: float) -> float:
+    """Return the weight to use where the errors alone say ``own`` with a standard error.
+
+    Drawn towards one half by its uncertainty, within 0 and 1; a route that is surely the lesser one (its share two standard
+    errors below one half) and adds nothing sure (not one standard error above none) gets none.
+
+    Examples
+    --------
+    >>> settle_weight(0.05, 0.1), settle_weight(0.97, 0.1), round(settle_weight(0.7, 0.5), 2)
+    (0.0, 1.0, 0.6)
+    """
+    if own < se and own + 2 * se < EVEN:
+        return 0.0
+    if own > 1 - se and own - 2 * se > EVEN:
+        return 1.0
+    precision, prior = 1.0 / max(se, 1e-6) ** 2, 1.0 / WEIGHT_SD**2
+    return float(np.clip((own * precision + EVEN * prior) / (precision + prior), 0.0, 1.0))
 
 
 def combine_routes(

@@ -22,7 +22,7 @@ def appendix_section(config: StudyConfig, models: dict[str, Any], sites: pd.Data
     tables = [_attribute_table(config, models, sites)]
     paragraphs = [
         "The tables below are enough to compute the study's estimates by hand. Areas are in km2 and floods in m3/s inside the equations, whatever units the "
-        "study's tables have; logarithms are of base 10.",
+        "study's tables have; logarithms are of base 10. The peaks behind them are in the table of peaks used.",
     ]
     equations: list[tuple[str, dict[str, Any], list[float | None]]] = [
         ("index flood", models["index_flood"], [None])

@@ -55,10 +55,15 @@ def _paragraphs(config: StudyConfig, found: Validation) -> list[str]:
     ]
     combination = found.combination
     if combination is not None:
+        settled = (
+            "the weight is drawn towards one half accordingly"
+            if 0 < combination.weight < 1
+            else "the lesser route adds nothing sure and gets no weight"
+        )
         told.append(
             f"Combined, the quantile regression has weight {combination.weight:.2f} and the growth curve {1 - combination.weight:.2f}, the same at all sites and probabilities "
-            f"so that floods keep their order. The errors alone would give {combination.own_weight:.2f} with a standard error of {combination.own_se:.2f}; the weight is drawn towards one "
-            f"half accordingly. Errors of the two routes correlate by {combination.correlation.min():.2f} to {combination.correlation.max():.2f}."
+            f"so that floods keep their order. The errors alone would give {combination.own_weight:.2f} with a standard error of {combination.own_se:.2f}; {settled}. "
+            f"Errors of the two routes correlate by {combination.correlation.min():.2f} to {combination.correlation.max():.2f}."
         )
     for route, c in found.calibration.items():
         stated = format_percent(config.confidence)
