@@ -126,3 +126,37 @@ def test_byte_order_mark_alone_is_an_empty_file(small_study: Any, tmp_path: Path
         problems(small_study, tmp_path)[0].code,
         problems(small_study, tmp_path)[0].file,
     )
+
+
+@pytest.mark.parametrize(
+    ("file", "column", "value", "code"),
+    [
+        ("peaks.csv", "flow", "1e308", "absurd_flow"),
+        ("thresholds.csv", "low", "1e12", "absurd_flow"),
+        ("gauges.csv", "area", "1e15", "absurd_area"),
+        ("targets.csv", "area", "2.1e8", "absurd_area"),
+    ],
+)
+def test_number_beyond_anything_on_earth_is_told(
+    file: str, column: str, value: str, code: str, small_study: Any, tmp_path: Path
+) -> None:
+    small_study.put(file, 2, column, value)
+    (problem,) = problems(small_study, tmp_path)
+    assert (code, file, 2, column) == (problem.code, problem.file, problem.row, problem.column)
+
+
+def test_decision_cannot_set_a_flow_without_end(small_study: Any, tmp_path: Path) -> None:
+    row = small_study.add(
+        "ledger.csv", date="2025-11-05", by="A. Analyst", subject="peak", action="set_flow", why="misread",
+        gauge_id="00103", water_year="1992", value="9" * 400,
+    )  # fmt: skip
+    (problem,) = problems(small_study, tmp_path)
+    assert ("bad_value", row, "value") == (problem.code, problem.row, problem.column)
+
+
+def test_attribute_in_use_that_is_the_same_everywhere_is_told(small_study: Any, tmp_path: Path) -> None:
+    for row in range(2, 8):
+        small_study.put("gauges.csv", row, "rain_mm", "900")
+        small_study.put("gauges.csv", row, "lakes_pct", "2")
+    (problem,) = problems(small_study, tmp_path)
+    assert ("constant_attribute", "rain_mm") == (problem.code, problem.column), "lakes_pct is not in use"

@@ -12,7 +12,15 @@ from numpy.typing import NDArray
 
 from wrackline.study.csv_files import IntArray, Sheet, TextArray
 from wrackline.study.faults import FaultLog
-from wrackline.study.vocabulary import BOOLEANS, EARLIEST_YEAR, LATEST_YEAR, did_you_mean, nearest_word
+from wrackline.study.vocabulary import (
+    BOOLEANS,
+    EARLIEST_YEAR,
+    LARGEST_AREA,
+    LARGEST_FLOW,
+    LATEST_YEAR,
+    did_you_mean,
+    nearest_word,
+)
 
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
@@ -111,7 +119,7 @@ def _about_number(word: str) -> str:
 
 
 def non_negative(sheet: Sheet, column: str, log: FaultLog) -> tuple[FloatArray, BoolArray]:
-    """Return flows or the like: finite, not below zero, blank allowed (NaN)."""
+    """Return flows: not below zero, not above any on Earth, blank allowed (NaN)."""
     values, good = numbers(sheet, column, log)
     negative = good & (values < 0)
     report(
@@ -123,15 +131,37 @@ def non_negative(sheet: Sheet, column: str, log: FaultLog) -> tuple[FloatArray, 
         "The number cannot be negative.",
         "Leave it blank where it is not known; some databases write -999 for that.",
     )
-    return np.where(negative, np.nan, values), good & ~negative
+    absurd = good & (values > LARGEST_FLOW)
+    report(
+        log,
+        sheet,
+        absurd,
+        column,
+        "absurd_flow",
+        f"No flow on Earth is above {LARGEST_FLOW:g}.",
+        "Correct it; leave an unbounded end blank.",
+    )
+    bad = negative | absurd
+    return np.where(bad, np.nan, values), good & ~bad
 
 
 def positive(sheet: Sheet, column: str, log: FaultLog, *, required: bool) -> tuple[FloatArray, BoolArray]:
-    """Return areas or the like: finite, above zero."""
+    """Return areas: above zero, not above any on Earth."""
     values, good = numbers(sheet, column, log, required=required)
     low = good & (values <= 0)
     report(log, sheet, low, column, "not_positive", "The number must be above zero.", "Correct it.")
-    return np.where(low, np.nan, values), good & ~low
+    absurd = good & (values > LARGEST_AREA)
+    report(
+        log,
+        sheet,
+        absurd,
+        column,
+        "absurd_area",
+        f"No basin on Earth is above {LARGEST_AREA:g}.",
+        "Correct it, or the unit that the study declares.",
+    )
+    bad = low | absurd
+    return np.where(bad, np.nan, values), good & ~bad
 
 
 def years(sheet: Sheet, column: str, log: FaultLog, *, required: bool = True) -> tuple[IntArray, BoolArray]:

@@ -14,6 +14,7 @@ from wrackline.study.faults import FaultLog
 from wrackline.study.peaks import water_years_of
 from wrackline.study.spans import find_keys, year_key
 from wrackline.study.vocabulary import (
+    LARGEST_FLOW,
     LEDGER,
     LEDGER_ACTIONS,
     REDUNDANCY,
@@ -159,7 +160,7 @@ def _values(sheet: Sheet, action_good: BoolArray, log: FaultLog) -> tuple[FloatA
 
 
 def flow_bounds(text: str) -> tuple[float, float] | None:
-    """Read ``low..high``; a blank low is 0, a blank high unbounded; None where it is not that.
+    """Read ``low..high``; a blank low is 0, a blank high unbounded; None where it is not that, or no flow on Earth.
 
     Examples
     --------
@@ -169,6 +170,8 @@ def flow_bounds(text: str) -> tuple[float, float] | None:
     number = r"\d+(?:\.\d+)?"
     match = re.fullmatch(rf"({number})?\s*\.\.\s*({number})?", text.strip())
     if match is None or match.groups() == (None, None):
+        return None
+    if any(float(given) > LARGEST_FLOW for given in match.groups() if given):
         return None
     return float(match[1] or 0), float(match[2] or "inf")
 

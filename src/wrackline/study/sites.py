@@ -217,6 +217,16 @@ def _attribute(sheet: Sheet, name: str, attribute: Attribute, in_use: bool, log:
             f"{missing.sum()} sites lack this attribute, which no regression uses.",
             column=name,
         )
+    constant = in_use and len(values) > 1 and not missing.any() and good.all() and np.ptp(values) == 0
+    if constant and "gauge_id" in sheet:
+        log.problem(
+            "constant_attribute",
+            sheet.file,
+            "All gauges have the same value, from which no regression can learn.",
+            "Correct the column, or take the attribute out of the study.",
+            row=1,
+            column=name,
+        )
     lower = -np.inf if attribute.lower is None else attribute.lower
     upper = np.inf if attribute.upper is None else attribute.upper
     outside = good & ((values < lower) | (values > upper))

@@ -25,6 +25,8 @@ SUBJECTS = tuple(LEDGER_ACTIONS)
 
 EARLIEST_YEAR, LATEST_YEAR = 1000, 2200
 """Water years outside this span are mistakes; today's date plays no part, so a study reads the same for ever."""
+LARGEST_FLOW, LARGEST_AREA = 1e9, 2e8
+"""In any unit that a study may declare: beyond the outburst floods of the ice ages, and the Earth's land."""
 
 
 @dataclass(frozen=True)
