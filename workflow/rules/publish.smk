@@ -13,11 +13,36 @@ rule publish:
         skew_contours="work/skew/skew_contours.csv",
         study=STUDY.name.replace("{", "{{").replace("}", "}}"),
     output:
-        page=update(f"{RESULTS}/report.html"),
-        manifest=update(f"{RESULTS}/manifest.json"),
-        columns=update(f"{RESULTS}/tables/columns.csv"),
-        map=update(f"{RESULTS}/maps/study.gpkg"),
-        skew_map=update(f"{RESULTS}/maps/skew.tif"),
+        page=report(
+            update(f"{RESULTS}/report.html"),
+            caption="../report/page.rst",
+            category="Study page",
+            labels={"result": "Study page"},
+        ),
+        manifest=report(
+            update(f"{RESULTS}/manifest.json"),
+            caption="../report/manifest.rst",
+            category="Provenance",
+            labels={"result": "Manifest"},
+        ),
+        columns=report(
+            update(f"{RESULTS}/tables/columns.csv"),
+            caption="../report/columns.rst",
+            category="Tables",
+            labels={"result": "Dictionary of columns"},
+        ),
+        map=report(
+            update(f"{RESULTS}/maps/study.gpkg"),
+            caption="../report/map.rst",
+            category="Maps",
+            labels={"result": "Map layers"},
+        ),
+        skew_map=report(
+            update(f"{RESULTS}/maps/skew.tif"),
+            caption="../report/skew_map.rst",
+            category="Maps",
+            labels={"result": "Generalized skew"},
+        ),
     log:
         "work/logs/publish.log",
     conda:

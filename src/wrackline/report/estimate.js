@@ -43,9 +43,8 @@ const estimateSite = (() => {
       return at[name] > space.upper[i] ? [`${name} is above the gauges' range`] : [];
     });
     if (!notes.length) {
-      notes = space.hulls
-        .filter(([one, other, hull]) => liesOutside(hull, [at[one], at[other]]))
-        .map(([one, other]) => `${one} and ${other} are each within the gauges' range, but not together`);
+      const pairs = space.hulls.filter(([one, other, hull]) => liesOutside(hull, [at[one], at[other]])).map(([one, other]) => `${one} with ${other}`);
+      if (pairs.length) notes = [`within the gauges' range one by one, but not together: ${pairs.join(", ")}`];
     }
     if (!notes.length && ownSpread > space.largest_spread) {
       notes = ["its attributes are each within the gauges' range, but not all together"];
@@ -180,15 +179,14 @@ const estimateSite = (() => {
     return route === "stream_transfer" ? 1 : (models.routes.calibration[route]?.factor ?? 1);
   }
 
-  function notePool(notes, name, pool, rarest) {
-    if (!pool) {
-      notes.unshift("the site is in no pool, so it has no growth curve");
-      return;
-    }
-    if (pool.heterogeneous) notes.push(`pool ${name} is heterogeneous`);
+  /** What to know of a site's pool before its growth curve is used. */
+  function notesOfPool(name, pool, rarest) {
+    if (!pool) return ["the site is in no pool, so it has no growth curve"];
+    const notes = pool.heterogeneous ? [`pool ${name} is heterogeneous`] : [];
     if (pool.station_years < 1 / rarest) {
       notes.push(`pool ${name} has ${pool.station_years} station-years, fewer than 1/AEP of the rarest floods`);
     }
+    return notes;
   }
 
   /** The pool whose growth curve a site takes: its region's, its own, or that of the gauge most like it. */
@@ -225,7 +223,9 @@ const estimateSite = (() => {
       routes.quantile_regression = predict(models.quantiles, rows, own.x);
       if (models.routes.combination) routes.routes_combined = combine(models.routes, routes.growth_curve, routes.quantile_regression, aeps);
     }
-    notePool(notes, name, pool, Math.min(...aeps));
+    const routeNotes = {}, ofPool = notesOfPool(name, pool, Math.min(...aeps));
+    if (!pool) notes.unshift(...ofPool);
+    else if (ofPool.length) Object.assign(routeNotes, { growth_curve: [...ofPool], routes_combined: [...ofPool] });
     notes.push(...borrowed);
     const has = (route) => routes[route] && finite(routes[route].y) && finite(routes[route].variance);
     const regional = [models.routes.adopted, ...ROUTES].find(has);
@@ -235,7 +235,6 @@ const estimateSite = (() => {
       const along = transfer(models, site, routes[regional], variance, regional, aeps);
       if (along) routes.stream_transfer = along;
     }
-    const routeNotes = {};
     const adopted = adopt(models, site.id, regional, routes, notes, routeNotes);
     const rows = [];
     for (const route of ROUTES.filter(has)) {
@@ -252,7 +251,8 @@ const estimateSite = (() => {
         });
       });
     }
-    return { rows, warnings: notes, adopted };
+    const ofAdopted = rows.find((row) => row.adopted)?.warnings.split("; ").filter(Boolean);
+    return { rows, warnings: ofAdopted ?? notes, adopted };
   };
 })();
 

@@ -36,7 +36,9 @@ def count_study(tables: Mapping[str, Table], n_gauges: int, n_targets: int) -> t
     tests = tables.get("pool_tests")
     if tests is not None:
         verdicts = tests.frame["verdict"].map(_short_verdict).value_counts()
-        words = ", ".join(f"{count} {verdict}" for verdict, count in sorted(verdicts.items()))
+        words = ", ".join(
+            f"{count} {verdict}".replace(" ", "\u00a0") for verdict, count in sorted(verdicts.items())
+        )
         counts.append(Count("Pools", len(tests.frame), None, words))
     if "target_estimates" in tables and n_targets:
         counts.append(Count("Ungauged sites estimated", _count_estimated(tables), n_targets))

@@ -18,6 +18,7 @@ LABELLED_AEPS = (0.9, 0.5, 0.2, 0.1, 0.04, 0.01, 0.002, 0.0001)
 
 def frame_items(data: Mapping[str, Any]) -> list[dict[str, Any]]:
     """Return the three frames as Bokeh's JSON items, with identifiers that depend on nothing but their order."""
+    from bokeh.core.types import ID
     from bokeh.embed import json_item
 
     figures = (
@@ -25,7 +26,7 @@ def frame_items(data: Mapping[str, Any]) -> list[dict[str, Any]]:
         ("curve", _curve(data["aeps"])),
         ("years", _years()),
     )
-    return [_numbered(name, dict(json_item(figure, f"{name}-frame"))) for name, figure in figures]
+    return [_numbered(name, dict(json_item(figure, ID(f"{name}-frame")))) for name, figure in figures]
 
 
 @cache
@@ -81,7 +82,9 @@ def _map(skew: Mapping[str, Any] | None) -> Any:
     from bokeh.models import PanTool, PrintfTickFormatter, Range1d, TapTool, WheelZoomTool
 
     pan, zoom = PanTool(), WheelZoomTool(modifiers={"ctrl": True}, zoom_on_axis=False)
-    frame = _figure("map", MAP_HEIGHT, Range1d(0, 1), Range1d(0, 1), [pan, zoom], lod_threshold=None)
+    frame = _figure(
+        "map", MAP_HEIGHT, Range1d(start=0, end=1), Range1d(start=0, end=1), [pan, zoom], lod_threshold=None
+    )
     frame.toolbar.active_drag, frame.toolbar.active_scroll = pan, zoom
     frame.grid.visible = False
     for axis in (*frame.xaxis, *frame.yaxis):
@@ -174,9 +177,10 @@ def _curve(aeps: Sequence[Mapping[str, Any]]) -> Any:
     places = {round(float(-ndtri(p)), 4): f"{100 * p:g}\u202f%" for p in LABELLED_AEPS}
     span = [one["z"] for one in aeps] or [0.0]
     frame = _figure(
-        "curve", CURVE_HEIGHT, Range1d(min(*span, -1.4) - 0.1, max(*span, 2.4) + 0.15), Range1d(1, 10), [],
+        "curve", CURVE_HEIGHT, Range1d(start=min(*span, -1.4) - 0.1, end=max(*span, 2.4) + 0.15), Range1d(start=1, end=10), [],
         y_axis_type="log", x_axis_label="annual exceedance probability", y_axis_label="flow",
     )  # fmt: skip
+    frame.min_border_left = 60
     frame.xaxis.ticker = FixedTicker(ticks=sorted(places))
     frame.xaxis.major_label_overrides = {place: text for place, text in places.items()}
     frame.varea(
@@ -229,8 +233,8 @@ def _years() -> Any:
     frame = _figure(
         "years",
         YEARS_HEIGHT,
-        Range1d(1900, 2000),
-        Range1d(0, 1),
+        Range1d(start=1900, end=2000),
+        Range1d(start=0, end=1),
         [],
         x_axis_label="water year",
         y_axis_label="flow",

@@ -44,6 +44,8 @@ LONG_TABLE = 25
 SHOWN_ROWS = 1200
 SHOWN_WARNINGS = 150
 SHOWN_PEAKS = 20_000
+NO_BREAK = "\u00a0"
+_INTERVAL = re.compile(r"\([^\s()]+ (?:–|to) [^\s()]+\)")
 _NUMBER = re.compile(r"[<>≤≥±~]?\s*[-\u2212+]?[\d\s,.\u202f]*\d(?:e[-+]?\d+)?\s*%?")
 
 CAUTIONS = (
@@ -242,6 +244,15 @@ def is_number(text: str) -> bool:
     return bool(_NUMBER.fullmatch(bare)) and not re.match(r"0\d", bare)
 
 
+def bind_interval(text: str) -> str:
+    """Keep an interval in brackets on one line: a break may come before the bracket only.
+
+    >>> bind_interval("90.3 (65.5 – 125)").count(NO_BREAK)
+    2
+    """
+    return _INTERVAL.sub(lambda found: found[0].replace(" ", NO_BREAK), text)
+
+
 def number_columns(table: PageTable) -> list[bool]:
     """Which columns of a table hold numbers alone (blanks aside)."""
     flags = []
@@ -298,7 +309,12 @@ def _template() -> Any:
     environment = Environment(
         autoescape=True, trim_blocks=True, lstrip_blocks=True, undefined=StrictUndefined
     )
-    environment.filters |= {"number_columns": number_columns, "count": format_count, "unit": format_unit}
+    environment.filters |= {
+        "number_columns": number_columns,
+        "count": format_count,
+        "unit": format_unit,
+        "bind": bind_interval,
+    }
     environment.filters["percent"] = format_percent
     environment.globals |= {
         "cite": cite,

@@ -85,6 +85,7 @@
   }
 
   embedFrames().then(() => {
+    document.documentElement.classList.add("lively");
     paintFrames();
     studyMap.start(pick);
     follow();

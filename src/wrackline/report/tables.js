@@ -84,7 +84,12 @@
       tools.append(field, count);
     }
     tools.append(make("button", { type: "button", class: "quiet", "aria-label": `Download as CSV: ${title}`, onclick: () => download(fileName(table, number), writeCsv(rowsOf(table))) }, "Download CSV"));
-    (table.closest(".table") ?? table).before(tools);
+    const frame = table.closest(".table") ?? table;
+    if (tools.children.length > 1) frame.before(tools);
+    else {
+      tools.classList.add("after");
+      frame.after(tools);
+    }
   };
 
   /* Tables far down are equipped when they come near, so that a national page opens at once. */
