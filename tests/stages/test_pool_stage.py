@@ -7,6 +7,7 @@ import pandas as pd
 import pytest
 
 from wrackline.hydrology.records import exact_records
+from wrackline.report.style import without_figures
 from wrackline.stages import pool
 from wrackline.stages.running import StudyFiles
 from wrackline.stats.distributions import gev
@@ -87,6 +88,11 @@ def lay_down(root, shuffle=None, regions=REGION, ledger=(), without=(), **poolin
     quick = {"simulations": 200, "close_call_simulations": 200, "growth_simulations": 200}
     config = StudyConfig.model_validate({"pooling": quick | pooling, "units": {"flow": "ft3/s"}})
     return StudyFiles(config, root / "study.yaml")
+
+
+def run_for_numbers(study):
+    with without_figures():
+        return pool.run(study)
 
 
 @pytest.fixture(scope="module")
@@ -189,9 +195,12 @@ def test_order_of_input_rows_changes_no_byte(study, tmp_path):
 
 def test_a_pools_numbers_do_not_depend_on_the_other_pools(study, tmp_path):
     alone = lay_down(
-        tmp_path, regions={g: r if r != "south" else "" for g, r in REGION.items()}, moves=[MOVE | {"to": ""}]
+        tmp_path,
+        regions={g: r if r != "south" else "" for g, r in REGION.items()},
+        moves=[MOVE | {"to": ""}],
+        compare=[],
     )
-    pool.run(alone)
+    run_for_numbers(alone)
     one, other = (
         json.loads((s.work("pool") / "growth.json").read_text(encoding="utf-8")) for s in (study, alone)
     )
@@ -202,7 +211,7 @@ def test_all_gauges_together_form_one_pool(tmp_path):
     study = lay_down(tmp_path)
     study = StudyFiles(
         study.config.model_copy(
-            update={"pooling": study.config.pooling.model_copy(update={"regions": "one"})}
+            update={"pooling": study.config.pooling.model_copy(update={"regions": "one", "compare": ()})}
         ),
         study.study_file,
     )
@@ -212,6 +221,99 @@ def test_all_gauges_together_form_one_pool(tmp_path):
 def test_no_region_anywhere_is_a_problem_with_a_mend(tmp_path):
     study = lay_down(tmp_path, regions=dict.fromkeys(REGION, ""))
     with pytest.raises(StudyFaults) as faults:
-        pool.run(study)
+        run_for_numbers(study)
     assert ["no_pool"] == [fault.code for fault in faults.value.problems]
     assert "set pooling.regions to one" in faults.value.problems[0].mend
+
+
+QUICK_COMPARISON = {"compare": [], "sheets": ["T1"]}
+
+
+def growth_of(study):
+    return json.loads((study.work("pool") / "growth.json").read_text(encoding="utf-8"))
+
+
+def test_targets_and_gauges_are_told_their_pools(study):
+    home = growth_of(study)["home"]
+    assert {"T1": "north", "T2": "south", "T3": "", MOVED: "south", HOMELESS: ""}.items() <= home.items()
+
+
+def test_a_pool_put_together_by_hand_equals_the_region_of_the_same_gauges_to_the_last_digit(study, tmp_path):
+    south = [g for g, region in REGION.items() if region == "south" or g == MOVED]
+    by_hand = {"pool": "south", "gauges": [g for g in south if g != UNUSED], "why": "as the region"}
+    regions = {g: "elsewhere" if g in south else r for g, r in REGION.items()}
+    hand = lay_down(tmp_path, regions=regions, pools=[by_hand], distributions=[PIN], **QUICK_COMPARISON)
+    run_for_numbers(hand)
+    assert growth_of(study)["pools"]["south"] == growth_of(hand)["pools"]["south"]
+    assert growth_of(study)["pools"]["north"] == growth_of(hand)["pools"]["north"]
+
+
+def test_a_region_of_influence_of_all_gauges_has_the_members_of_the_one_region(tmp_path):
+    study = lay_down(tmp_path, method="influence", influence_years=9999, **QUICK_COMPARISON)
+    run_for_numbers(study)
+    members = sorted(g for g in REGION if g not in (UNUSED, SHORT))
+    assert members == sorted(growth_of(study)["pools"]["T1"]["gauges"])
+
+
+def test_a_line_of_the_ledger_moves_a_gauge_like_the_configuration_does_and_its_effect_is_told(
+    study, tmp_path
+):
+    line = {
+        "date": "2025-01-02",
+        "by": "A. N. Analyst",
+        "subject": "pool",
+        "action": "move",
+        "gauge_id": MOVED,
+        "value": "south",
+    }
+    line |= {"why": MOVE["why"], "effect": "gauge moved"}
+    superseded = line | {"gauge_id": "03", "effect": "superseded by row 4"}
+    moved = lay_down(tmp_path, ledger=[line, superseded], distributions=[PIN], **QUICK_COMPARISON)
+    run_for_numbers(moved)
+    assert growth_of(study)["pools"] == growth_of(moved)["pools"]
+    words = " ".join(read_contribution(moved.work("pool")).sections[0].paragraphs)
+    assert "drains to the other side of the divide (ledger, 2025-01-02)" in words
+    assert "The moves took pool north from 8 gauges" in words
+
+
+def test_leaving_a_gauge_out_of_its_own_region_of_influence_equals_a_study_without_it(tmp_path):
+    options = {
+        "method": "influence",
+        "own_record": "leave_out",
+        "influence_years": 200,
+        "influence_gauges": 4,
+    }
+    whole = lay_down(tmp_path / "whole", **options, **QUICK_COMPARISON)
+    run_for_numbers(whole)
+    fewer = lay_down(tmp_path / "fewer", without=["05"], **options, **QUICK_COMPARISON)
+    run_for_numbers(fewer)
+    left_out = growth_of(whole)["pools"]["05"]["gauges"]
+    assert "05" not in left_out
+    assert all("05" not in p["gauges"] for name, p in growth_of(fewer)["pools"].items())
+    assert "05" in growth_of(whole)["pools"]["04"]["gauges"]
+
+
+def test_clusters_chosen_with_h_are_labelled_and_their_trials_told(tmp_path):
+    study = lay_down(tmp_path, method="clusters", cluster_gauges=8, cluster_years=100, **QUICK_COMPARISON)
+    run_for_numbers(study)
+    contribution = read_contribution(study.work("pool"))
+    tests, trials = table(contribution, "pool_tests"), table(contribution, "pool_cluster_trials")
+    assert tests["after_selection"].all()
+    assert tests["verdict"].str.contains("after selection").all()
+    assert len(tests) == trials.loc[trials["chosen"], "n_clusters"].item()
+    assert set(growth_of(study)["home"]) >= set(TARGETS)
+
+
+def test_ways_of_pooling_are_compared_at_the_same_gauges(study, contribution):
+    found = table(contribution, "pool_validation")
+    assert {"one", "regions", "clusters", "influence"} == set(found["method"])
+    assert 1 == found["n_gauges"].nunique()
+    assert (found["rmse"] >= found["net_error"]).all()
+    assert ["regions"] == found.loc[found["used"], "method"].unique().tolist()
+    assert found["covered"].between(0, 1).all()
+
+
+def test_nothing_is_suggested_silently(study, contribution):
+    suggested = table(contribution, "pool_suggestions")
+    weights = table(contribution, "pools").set_index(["pool", "gauge_id"])["weight"]
+    assert all(weights[p, g] > 0 for p, g in suggested[["pool", "gauge_id"]].itertuples(index=False))

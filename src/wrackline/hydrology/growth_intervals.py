@@ -230,11 +230,14 @@ def _departures(
         return _log(growth_factors(nearest, Ratios(t, t3, nothing, nothing), aep, statistic))
 
     centre = np.array([ratios.lcv]), np.array([ratios.lskew])
-    by_law = of_law(lcv, lskew) - of_law(*centre)
-    by_kappa = _log(family.factors(lcv, lskew, aep, statistic)) - _log(
-        family.factors(*centre, aep, statistic)
-    )
-    return np.where(np.isfinite(by_law).all(axis=1, keepdims=True), by_law, by_kappa)
+    away = of_law(lcv, lskew) - of_law(*centre)
+    failed = ~np.isfinite(away).all(axis=1)
+    if failed.any():
+        by_kappa = _log(family.factors(lcv, lskew, aep, statistic)) - _log(
+            family.factors(*centre, aep, statistic)
+        )
+        away[failed] = by_kappa[failed]
+    return away
 
 
 def _choose_again(sample: Ratios, fit: FitMeasures) -> NDArray[np.str_]:

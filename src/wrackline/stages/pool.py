@@ -69,7 +69,7 @@ def run(study: StudyFiles) -> str:
     for site, name in plan.home.items():
         plan.home[site] = name if name in pools else ""
 
-    scores = compare_ways(config, inputs, material, likeness, plan, pools, faults)
+    scores = compare_ways(config, inputs, material, likeness, plan, pools)
     bootstraps = bootstrap_pools(config, inputs.records, pools)
     shown = choose_sheets(config, pools)
     folder = study.work("pool")

@@ -88,7 +88,6 @@ def compare_ways(
     likeness: Likeness | None,
     plan: PoolPlan,
     pools: dict[str, PoolAnalysis],
-    faults: FaultLog,
 ) -> tuple[PoolingScore, ...]:
     """Score every configured way of pooling by leave-one-out; nothing where too few gauges have long records."""
     from wrackline.stages.pool import plan_pools, pool_settings
@@ -103,22 +102,28 @@ def compare_ways(
         pool_settings(config), aep=JUDGED_AEPS, simulations=_SIMULATIONS, growth_simulations=_SIMULATIONS,
         close_call_simulations=_SIMULATIONS, anderson_darling_replicates=0,
     )  # fmt: skip
-    scores: list[PoolingScore] = []
+    predictions: dict[str, tuple[FloatArray, FloatArray]] = {}
     for method in config.pooling.compare:
         if method in ("clusters", "influence") and likeness is None:
             continue
         if method == "influence":
             assert likeness is not None
-            found = _leave_out_of_influence(config, inputs, material, likeness, judged, quick)
+            predictions[method] = _leave_out_of_influence(config, inputs, material, likeness, judged, quick)
         else:
             its_plan = plan if method == plan.method else plan_pools(
                 config, method, inputs, material, likeness, FaultLog()
             )  # fmt: skip
-            found = _leave_out_of_groups(
+            predictions[method] = _leave_out_of_groups(
                 config, inputs, material, its_plan, pools if its_plan is plan else {}, quick
             )
-        scores += score(method, *found, own, material.lmoments.n, aep, judged, config.confidence)
-    return tuple(scores)
+    for predicted, _ in predictions.values():
+        # a gauge that one way cannot predict says nothing about the others
+        judged &= np.isfinite(predicted).all(axis=1)
+    return tuple(
+        line
+        for method, found in predictions.items()
+        for line in score(method, *found, own, material.lmoments.n, aep, judged, config.confidence)
+    )
 
 
 def choose_judged(material: PoolMaterial, fewest_peaks: int) -> BoolArray:
