@@ -30,7 +30,7 @@ def wheel(tmp_path_factory: pytest.TempPathFactory, repository: Path) -> Path:
     for name in ("pyproject.toml", "README.md", "LICENSE"):
         shutil.copy(repository / name, sources / name)
     for name in ("src", "config", "workflow/schemas"):
-        leave_out = shutil.ignore_patterns("__pycache__", "*.egg-info")
+        leave_out = shutil.ignore_patterns("__pycache__", "*.egg-info", ".*")
         shutil.copytree(repository / name, sources / name, ignore=leave_out)
     into = tmp_path_factory.mktemp("wheel")
     command = [sys.executable, "-m", "pip", "wheel", "--quiet", "--no-deps", "--no-index"]
@@ -82,12 +82,17 @@ def call(
     return run
 
 
+def is_cache(path: Path) -> bool:
+    """Whether Python or a checker left the file."""
+    return any(part == "__pycache__" or part.startswith(".") for part in path.parts)
+
+
 def test_wheel_holds_every_module_and_file_of_the_package(wheel: Path, repository: Path) -> None:
     package = repository / "src" / "wrackline"
     wanted = {
         path.relative_to(package).as_posix()
         for path in package.rglob("*")
-        if path.is_file() and "__pycache__" not in path.parts
+        if path.is_file() and not is_cache(path.relative_to(package))
     }
     assert wanted >= ADDED
     held = set(zipfile.ZipFile(wheel).namelist())
