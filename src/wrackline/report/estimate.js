@@ -123,19 +123,20 @@ const estimateSite = (() => {
       const distance = (gauge) => Math.abs(Math.log(gauge.area / site.area));
       parts = [[first(near, (a, b) => distance(a) < distance(b)), 1]];
     }
-    const shared = parts.reduce((sum, [gauge, weight]) => sum + weight * share(gauge), 0);
     const found = aeps.map((_, p) => {
-      let shift = 0, carried = 0, own = 0;
-      for (const [gauge, weight] of parts) {
-        const part = parts.length === 2 ? 1 : share(gauge);
+      let shift = 0, own = 0, left = 1;
+      const slopes = [], shares = parts.map(([gauge]) => share(gauge));
+      parts.forEach(([gauge, weight], n) => {
+        const part = parts.length === 2 ? 1 : shares[n];
         const departure = 10 ** (gauge.y[p] - gauge.regional[p]);
-        const factor = 1 + part * (departure - 1), slope = (part * departure) / factor;
+        const factor = 1 + part * (departure - 1), slope = (weight * part * departure) / factor;
         shift += weight * Math.log10(factor);
-        carried += weight * slope;
-        own += (weight * slope) ** 2 * gauge.variance[p];
-      }
-      const left = Math.max(1 + carried ** 2 - 2 * carried * shared, 0);
-      return { y: base.y[p] + shift, variance: left * variance[p] + own };
+        own += slope ** 2 * gauge.variance[p];
+        left += slope ** 2 - 2 * slope * shares[n];
+        slopes.push(slope);
+      });
+      if (parts.length === 2) left += 2 * slopes[0] * slopes[1] * Math.max(shares[0] + shares[1] - 1, 0);
+      return { y: base.y[p] + shift, variance: Math.max(left, 0) * variance[p] + own };
     });
     return { y: found.map((one) => one.y), variance: found.map((one) => one.variance), freedom: base.freedom };
   }
