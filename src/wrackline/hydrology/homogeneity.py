@@ -17,6 +17,8 @@ from wrackline.stats.lmoments import order_weights
 from wrackline.stats.streams import random_stream
 
 LARGEST_ACCEPTED_Z = 1.64
+_NEAR_ZERO = 0.003
+"""Shape below which quantiles are taken by functions that are exact near zero."""
 BLOCK = 250
 """Simulated regions per block of the correlated simulation: what a core's cache holds well."""
 
@@ -322,11 +324,31 @@ def measure_fit(
 def _sample_ratios(log_p: FloatArray, parent: Parent) -> FloatArray:
     """L-CV, L-skew, L-kurtosis, fifth ratio (4, s) of sorted samples given as log probabilities (s, n)."""
     location, scale, _, _ = parent.parameters
-    moments = (_reduced_kappa(log_p, parent.parameters) @ order_weights(log_p.shape[-1])).T
+    weights = order_weights(log_p.shape[-1])
+    if min(abs(parent.parameters[2]), abs(parent.parameters[3])) > _NEAR_ZERO:
+        moments = _moments_of_powers(log_p, parent.parameters, weights)
+    else:
+        moments = (_reduced_kappa(log_p, parent.parameters) @ weights).T
     ratios = np.empty((4, len(log_p)))
     np.divide(scale * moments[1], location + scale * moments[0], out=ratios[0])
     np.divide(moments[2:], moments[1], out=ratios[1:])
     return ratios
+
+
+def _moments_of_powers(log_p: FloatArray, parameters: FloatArray, weights: FloatArray) -> FloatArray:
+    """L-moments (5, s) of reduced kappa samples, shapes away from zero, by the powers that the quantiles are made of.
+
+    L-moments are linear, so what scales and shifts the powers is applied to them: two passes fewer than `_reduced_kappa`.
+    """
+    _, _, k, h = parameters
+    y = np.expm1(np.multiply(log_p, h))
+    np.abs(y, out=y)
+    np.log(y, out=y)
+    y *= k
+    np.exp(y, out=y)
+    moments = (y @ weights).T * (-(abs(h) ** -k) / k)
+    moments[0] += 1.0 / k
+    return np.asarray(moments)
 
 
 def _reduced_kappa(log_p: FloatArray, parameters: FloatArray) -> FloatArray:

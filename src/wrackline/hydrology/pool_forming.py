@@ -54,7 +54,7 @@ class ClusterTrial:
     mean_h1 : float
         H1 of the clusters, averaged over gauges.
     fit_to_size : bool
-        Whether no cluster is too small and the typical one has the station-years wanted.
+        Whether no cluster is too small and the median one has the station-years wanted.
     """
 
     n_clusters: int
@@ -233,8 +233,8 @@ def choose_clusters(
     Notes
     -----
     Little accuracy is gained beyond about 20 gauges (Hosking and Wallis, 1997, section 4.3). Numbers up to three
-    to either side of one cluster per 20 gauges are tried; of those whose clusters all have five gauges and whose
-    median cluster has the station-years wanted, the one with the smallest H1, averaged over gauges, is taken.
+    to either side of one cluster per 20 gauges are tried; of those whose clusters all have five gauges and half the
+    station-years wanted, and whose median cluster has them all, the one with the smallest H1, averaged over gauges, is taken.
     """
     middle = max(1, round(len(sites) / typical_gauges))
     trials, found = [], {}
@@ -245,7 +245,8 @@ def choose_clusters(
         gauges = np.bincount(label)
         years = np.bincount(label, station_years)
         h1 = np.array([heterogeneity(np.flatnonzero(label == c)) for c in range(len(centre))])
-        fits = bool(gauges.min() >= _FEWEST_IN_A_CLUSTER and np.median(years) >= typical_years)
+        enough = np.median(years) >= typical_years and years.min() >= typical_years / 2
+        fits = bool(gauges.min() >= _FEWEST_IN_A_CLUSTER and enough)
         trials.append(
             ClusterTrial(k, int(gauges.min()), int(years.min()), float(gauges @ h1 / gauges.sum()), fits)
         )
@@ -258,7 +259,7 @@ def choose_clusters(
     reason = (
         f"{best.n_clusters} clusters of {len(trials)} numbers tried: the smallest H1 averaged over gauges "
         f"({best.mean_h1:.2f}) among those with at least {_FEWEST_IN_A_CLUSTER} gauges in every cluster and "
-        f"{typical_years} station-years in the median one"
+        f"{typical_years} station-years in the median one, half of that in all"
     )
     return Clusters(*found[best.n_clusters], tuple(trials), reason, len(good) > 1)
 

@@ -18,7 +18,8 @@ REFERENCE_AEPS = (0.99, 0.9, 0.5, 0.2, 0.1, 0.04, 0.02, 0.01, 0.005, 0.002, 0.00
 
 def pool_style(number: int) -> tuple[str, str]:
     """Return the colour and marker of the pool with this number."""
-    return SERIES[number % len(SERIES)], MARKERS[number % len(MARKERS)]
+    # beyond eight pools the colours come round again with other marks
+    return SERIES[number % len(SERIES)], MARKERS[(number + number // len(SERIES)) % len(MARKERS)]
 
 
 def number_gauges(pools: dict[str, PoolAnalysis]) -> dict[str, int]:

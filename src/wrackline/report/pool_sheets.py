@@ -126,5 +126,5 @@ def draw_pool_map(path: Path, gauges: pd.DataFrame, targets: pd.DataFrame, plan:
     if len(plan.members) <= 12 or plan.method == "influence":
         handles, labels = axes.get_legend_handles_labels()
         if handles:
-            axes.legend(handles, labels, fontsize=8, loc="best")
+            axes.legend(handles, labels, fontsize=8, loc="upper left", bbox_to_anchor=(1.02, 1.0))
     save_figure(figure, path)
