@@ -152,7 +152,7 @@ def test_skew_surface_and_its_error_can_be_laid_on_the_map(example_page):
         box.click()
     legend = example_page.text("#map-legend")
     assert "generalized skew" in legend
-    assert "its mean square error" in legend
+    assert "mean square error of the skew" in legend
 
 
 def random_targets(results: Path, n: int = 50) -> str:

@@ -1,5 +1,8 @@
 # Tables, maps, page and manifest: the only stage that writes results. Earlier results stay as they are
 # until the new ones are whole, hence `update`.
+report: "../report/study.rst"
+
+
 rule publish:
     input:
         contributions=expand("work/{stage}/contribution.json", stage=RUN_STAGES[:-1]),

@@ -15,6 +15,11 @@ from wrackline.report.style import INK, MUTED, RISING, TWO_SIDED, WATER
 MAP_HEIGHT, CURVE_HEIGHT, YEARS_HEIGHT = 540, 400, 220
 LABELLED_AEPS = (0.9, 0.5, 0.2, 0.1, 0.04, 0.01, 0.002, 0.0001)
 
+LEAST_SKEW_RANGE = 0.35
+"""The skew surface is coloured at least this far to both sides of zero: a level map near zero looks level and near zero."""
+LEAST_MSE_SHARE = 0.5
+"""The error's colours span at least this share of its largest value."""
+
 
 def frame_items(data: Mapping[str, Any]) -> list[dict[str, Any]]:
     """Return the three frames as Bokeh's JSON items, with identifiers that depend on nothing but their order."""
@@ -154,9 +159,11 @@ def _add_surface(frame: Any, band: str, palette: Sequence[str], skew: Mapping[st
     known = values[np.isfinite(values)]
     low, high = float(known.min()), float(known.max())
     if palette is TWO_SIDED:
-        low, high = -max(abs(low), abs(high), 1e-3), max(abs(low), abs(high), 1e-3)
-    elif high <= low:
-        low, high = low * 0.9 - 1e-6, high * 1.1 + 1e-6
+        far = max(abs(low), abs(high), LEAST_SKEW_RANGE)
+        low, high = -far, far
+    else:
+        room = max(LEAST_MSE_SHARE * high - (high - low), 0.0) / 2
+        low, high = low - room, high + room
     mapper = LinearColorMapper(
         name=f"{band} colours", palette=list(palette), low=low, high=high, nan_color="rgba(0,0,0,0)"
     )

@@ -84,28 +84,22 @@ const studyMap = (() => {
       entries.push([drawSymbol(own.marker, own.fillColour, ink), group || "gauge used"]);
     } else palette.forEach((fillColour, i) => entries.push([drawSymbol("square", fillColour, ink), rangeText(limits, i)]));
     if (byGroup && groups.length > 24) entries.push(["", `and ${groups.length - 24} more`]);
-    if (sites.kind.includes("t")) entries.push([drawSymbol("plus", byGroup ? colour("paper") : BLANK, ink), "ungauged site"]);
+    if (sites.kind.includes("t")) entries.push([drawSymbol("plus", byGroup ? colour("paper") : "none", ink), "ungauged site"]);
     if (sites.used.includes(false)) entries.push([drawSymbol("circle", "none", BLANK), "gauge not used"]);
     if (!byGroup && view.values.some((value, i) => value === null && sites.used[i])) entries.push([drawSymbol("circle", "none", BLANK), "no value"]);
-    for (const band of ["skew", "mse"]) {
-      const surface = study.skew && part("map", `${band} surface`);
-      if (surface?.visible) entries.push(...surfaceLegend(surface, band));
-    }
+    const list = (rows) => make("ul", { class: "legend" }, ...rows.map(([symbol, text]) => make("li", {}, symbol, " ", text)));
+    const surfaces = ["skew", "mse"].map((band) => [band, study.skew && part("map", `${band} surface`)]).filter(([, surface]) => surface?.visible);
     document.getElementById("map-legend").replaceChildren(
-      ...entries.map(([symbol, text]) => make("li", {}, symbol, " ", text)),
+      list(entries),
+      ...surfaces.flatMap(([band, surface]) => [make("p", {}, band === "skew" ? "Surface: generalized skew" : "Surface: mean square error of the skew"), list(surfaceLegend(surface))]),
     );
   }
 
-  function surfaceLegend(surface, band) {
+  function surfaceLegend(surface) {
     const { palette, low, high } = surface.glyph.color_mapper;
-    const step = (high - low) / palette.length;
+    const step = (high - low) / palette.length, word = (value) => wordNumber(value, 2);
     const colours = [...palette].map((value) => (typeof value === "string" ? value : "#" + (value >>> 8).toString(16).padStart(6, "0")));
-    const name = band === "skew" ? "generalized skew" : "its mean square error";
-    const word = (value) => wordNumber(value, 2).replace("-", "\u2212");
-    return colours.map((fillColour, i) => [
-      drawSymbol("square", fillColour),
-      `${i === 0 ? name + " " : ""}${word(low + i * step)} to ${word(low + (i + 1) * step)}`,
-    ]);
+    return colours.map((fillColour, i) => [drawSymbol("square", fillColour), `${word(low + i * step)} to ${word(low + (i + 1) * step)}`]);
   }
 
   function rangeText(limits, i) {

@@ -172,6 +172,9 @@ const sitePanel = (() => {
     document.getElementById("site-panel").classList.add("picked");
     drawCurve(floods, peaks);
     drawYears(peaks);
+    document.getElementById("curve-caption").textContent = peaks
+      ? "Peaks stand at their plotting positions, to which no curve is fitted. Where the routes part, the choice of route matters as much as the interval."
+      : "No peaks were observed here. Where the routes part, the choice of route matters as much as the interval.";
     const empty = !Object.keys(floods).length && !peaks?.z.some((z) => z !== null);
     document.getElementById("curve-part").hidden = empty;
     document.getElementById("curve-none").hidden = !empty;
