@@ -1,5 +1,7 @@
 """Index floods of records: known answers, sampling errors against simulation, correlated medians."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
@@ -47,6 +49,21 @@ def test_variance_of_the_log_median_matches_simulation():
     index = sample_index_floods(records_of(np.ones(n)), np.array([s * np.sqrt(np.pi / 2)]))
     # Asymptotic formula at n = 60: within 3 %, of which 1 % is the simulation's own error.
     assert index.log10_variance[0] == pytest.approx(simulated, rel=0.03)
+
+
+def test_years_below_a_gauge_base_keep_their_rank_in_the_median():
+    records = records_of([10, 12, 14, 16, 5, 5, 5])
+    low = np.array([False] * 4 + [True] * 3)
+    censored = replace(records, flow_low=np.where(low, 0.0, records.flow_low))
+    assert sample_index_floods(censored, np.full(1, 0.5)).flow[0] == 10.0
+    assert sample_index_floods(censored, np.full(1, 0.5), "mean").flow[0] == 13.0
+
+
+def test_historic_years_below_a_high_threshold_say_nothing_about_the_median():
+    records = records_of([10, 12, 14, 90, 90])
+    silent = np.array([False] * 3 + [True] * 2)
+    censored = replace(records, flow_low=np.where(silent, 0.0, records.flow_low), observed=~silent)
+    assert sample_index_floods(censored, np.full(1, 0.5)).flow[0] == 12.0
 
 
 @pytest.mark.parametrize("rho", [0.3, 0.8])

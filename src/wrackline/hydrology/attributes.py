@@ -53,6 +53,9 @@ class DesignPlan:
 
     def transformed(self, attributes: Mapping[str, FloatArray]) -> FloatArray:
         """Return the transformed attributes (sites, attributes); NaN or infinite where that is impossible."""
+        if not self.names:
+            sites = len(next(iter(attributes.values()))) if attributes else 0
+            return np.empty((sites, 0))
         with np.errstate(divide="ignore", invalid="ignore"):
             return np.column_stack(
                 [

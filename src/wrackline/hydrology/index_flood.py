@@ -39,7 +39,9 @@ class IndexFloods:
 def sample_index_floods(
     records: PeakRecords, relative_sd: FloatArray, statistic: Literal["median", "mean"] = "median"
 ) -> IndexFloods:
-    """Take the index flood of every gauge from its exact systematic peaks.
+    """Take the index flood of every gauge from its systematic peaks.
+
+    The mean takes exactly known peaks alone; the median also counts years known to lie below it.
 
     Parameters
     ----------
@@ -54,22 +56,37 @@ def sample_index_floods(
     -----
     The sampling variance of a median is ``1 / (4 n f(m)^2)``; both variances fall with ``1 / n``.
     """
-    kept = records.keep_rows(records.systematic_exact)
-    n = np.diff(kept.offsets)
-    flow = np.full(records.n_gauges, np.nan)
-    order = np.lexsort((kept.flow_low, kept.gauge_index))
-    ordered, filled = kept.flow_low[order], n > 0
-    start = kept.offsets[:-1]
+    exact = records.systematic_exact
+    n, flow = _middle_or_mean(records, exact, records.flow_low, statistic)
     if statistic == "median":
-        below, above = start + (n - 1) // 2, start + n // 2
-        flow[filled] = 0.5 * (ordered[below[filled]] + ordered[above[filled]])
-    else:
-        total = np.add.reduceat(np.append(ordered, 0.0), start[filled])
-        flow[filled] = total / n[filled]
+        # A year known to lie below the median takes its rank without its size; leaving it out would raise the median.
+        low = ~records.exact & (records.flow_low == 0) & ~records.historic
+        low &= records.flow_high <= flow[records.gauge_index]
+        if low.any():
+            value = np.where(exact, records.flow_low, records.flow_high)
+            n, flow = _middle_or_mean(records, exact | low, value, statistic)
+    filled = n > 0
     positive = filled & (np.nan_to_num(flow) > 0)
     variance = np.full(records.n_gauges, np.nan)
     variance[positive] = (LOG10_E * relative_sd[positive]) ** 2 / n[positive]
     return IndexFloods(n, flow, variance)
+
+
+def _middle_or_mean(
+    records: PeakRecords, rows: BoolArray, value: FloatArray, statistic: Literal["median", "mean"]
+) -> tuple[np.ndarray, FloatArray]:
+    """Count the marked rows of every gauge and take the median or mean of their values; NaN where there is none."""
+    gauge = records.gauge_index[rows]
+    ordered = value[rows][np.lexsort((value[rows], gauge))]
+    n = np.bincount(gauge, minlength=records.n_gauges)
+    start, filled = np.cumsum(n) - n, n > 0
+    flow = np.full(records.n_gauges, np.nan)
+    if statistic == "median":
+        below, above = start + (n - 1) // 2, start + n // 2
+        flow[filled] = 0.5 * (ordered[below[filled]] + ordered[above[filled]])
+    else:
+        flow[filled] = np.add.reduceat(np.append(ordered, 0.0), start[filled]) / n[filled]
+    return n, flow
 
 
 def index_sampling_covariance(

@@ -115,6 +115,8 @@ def _describe_gauges(
 
 
 def _count_routes(table: pd.DataFrame) -> str:
+    if table.empty:
+        return "no route anywhere"
     adopted = table[table["adopted"]].drop_duplicates("target_id")
     counts = adopted["route"].value_counts().sort_index()
     return ", ".join(f"{route} at {count}" for route, count in counts.items()) or "no route anywhere"

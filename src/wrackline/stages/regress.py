@@ -103,7 +103,8 @@ def run(study: StudyFiles) -> str:
     region = intercept_groups(growth, gauges.sites, pool)
 
     choice = search_attributes(config, gauges, floods, targets, region, faults)
-    attributes = config.regression.attributes or (choice.best.attributes if choice else ("area",))
+    # Where no attribute earns a place, area stays: floods of different basins do not compare without it.
+    attributes = config.regression.attributes or (choice.best.attributes if choice else ()) or ("area",)
     index = fit_index(config, gauges, growth, region, attributes, faults)
     quantiles = fit_quantiles(config, gauges, floods, region, attributes, faults)
 
@@ -250,10 +251,13 @@ def fit_index(
     if (index.usable & np.isfinite(design).all(axis=1)).sum() <= design.shape[1] + 1:
         faults.problem(
             "too_few_gauges_for_regression", "regress",
-            f"the index-flood equation has {design.shape[1]} coefficients and too few gauges to fit them",
+            f"the index-flood equation has {design.shape[1]} coefficients and too few gauges to fit them.",
             "Name fewer attributes in index_flood.attributes, or relax the screening.",
         )  # fmt: skip
         faults.stop_on_problems()
+    refuse_dependent_columns(
+        plan, design[index.usable & np.isfinite(design).all(axis=1)], "index_flood", faults
+    )
     fit, in_fit = fit_index_regression(index, design, covariance, config.regression.model_variance)
     y, between = np.log10(index.flow[in_fit]), np.ix_(in_fit, in_fit)
     return IndexEquation(
@@ -264,6 +268,20 @@ def fit_index(
             random_stream(config.seed, "regress", "index_flood"),
         ),
     )  # fmt: skip
+
+
+def refuse_dependent_columns(plan: DesignPlan, design: FloatArray, part: str, faults: FaultLog) -> None:
+    """End the run where a column is a combination of those before it, naming it; a constant attribute is one."""
+    for i, column in enumerate(plan.columns):
+        if np.linalg.matrix_rank(design[:, : i + 1]) <= i:
+            faults.problem(
+                "dependent_attributes",
+                "regress",
+                f"{column} is constant over the gauges or a combination of the columns before it: {', '.join(plan.columns[:i])}.",
+                f"Name other attributes in {part}.attributes.",
+            )
+            break
+    faults.stop_on_problems()
 
 
 def fit_quantiles(
@@ -285,6 +303,7 @@ def fit_quantiles(
             "Name fewer attributes in regression.attributes, or relax the screening.",
         )  # fmt: skip
         return None
+    refuse_dependent_columns(plan, design[in_fit], "regression", faults)
     sd, errors = describe_errors(gauges, floods, in_fit)
     y = floods.log10_flow[in_fit]
     regression = fit_quantile_regression(
