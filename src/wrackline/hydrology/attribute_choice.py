@@ -144,7 +144,9 @@ def _fit_subset(
     )
     objections = [f"sign of {name}" for name in wrong]
     if (ratios < SMALLEST_RATIO).any():
-        objections.append(f"weak: {', '.join(n for n, r in zip(chosen, ratios, strict=True) if r < SMALLEST_RATIO)}")
+        objections.append(
+            f"weak: {', '.join(n for n, r in zip(chosen, ratios, strict=True) if r < SMALLEST_RATIO)}"
+        )
     if inflation > largest_inflation:
         objections.append(f"inflation {inflation:.1f}")
     return SubsetFit(

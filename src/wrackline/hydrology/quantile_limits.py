@@ -42,7 +42,9 @@ def standard_error_moments(
     """
 
     # The frequency factor is by far the dearest part, and depends on the skew alone: seven values serve all.
-    factors = frequency_factor(aeps[None, None, :], skew[None, :, None] + _STEP * np.arange(-3, 4)[:, None, None])
+    factors = frequency_factor(
+        aeps[None, None, :], skew[None, :, None] + _STEP * np.arange(-3, 4)[:, None, None]
+    )
 
     def gradient_at(sd: FloatArray, offset: int) -> FloatArray:
         near, far = factors[4 + offset] - factors[2 + offset], factors[5 + offset] - factors[1 + offset]

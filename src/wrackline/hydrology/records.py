@@ -79,7 +79,11 @@ class PeakRecords:
         """Return the records with only the marked rows; every gauge stays, perhaps empty."""
         counts = np.bincount(self.gauge_index[keep], minlength=self.n_gauges)
         offsets = np.concatenate([[0], np.cumsum(counts)]).astype(np.int64)
-        rows = {f.name: getattr(self, f.name)[keep] for f in fields(self) if f.name not in ("gauge_ids", "offsets")}
+        rows = {
+            f.name: getattr(self, f.name)[keep]
+            for f in fields(self)
+            if f.name not in ("gauge_ids", "offsets")
+        }
         return replace(self, offsets=offsets, **rows)
 
     def keep_gauges(self, gauges: Sequence[int] | IntArray) -> PeakRecords:
@@ -88,11 +92,17 @@ class PeakRecords:
         starts, counts = self.offsets[:-1][gauges], np.diff(self.offsets)[gauges]
         offsets = np.concatenate([[0], np.cumsum(counts)]).astype(np.int64)
         rows_at = np.repeat(starts - offsets[:-1], counts) + np.arange(offsets[-1])
-        rows = {f.name: getattr(self, f.name)[rows_at] for f in fields(self) if f.name not in ("gauge_ids", "offsets")}
+        rows = {
+            f.name: getattr(self, f.name)[rows_at]
+            for f in fields(self)
+            if f.name not in ("gauge_ids", "offsets")
+        }
         return replace(self, gauge_ids=tuple(self.gauge_ids[i] for i in gauges), offsets=offsets, **rows)
 
 
-def exact_records(gauge_ids: Sequence[str], offsets: IntArray, water_year: IntArray, flow: FloatArray) -> PeakRecords:
+def exact_records(
+    gauge_ids: Sequence[str], offsets: IntArray, water_year: IntArray, flow: FloatArray
+) -> PeakRecords:
     """Build records of exactly known systematic peaks, as a simulation or a notebook has them.
 
     Parameters

@@ -45,8 +45,7 @@ LONG_TABLE = 25
 SHOWN_ROWS = 1200
 SHOWN_WARNINGS = 150
 SHOWN_PEAKS = 20_000
-NO_BREAK = "\u00a0"
-_INTERVAL = re.compile(r"\([^\s()]+ (?:–|to) [^\s()]+\)")
+_INTERVAL = re.compile(r"\([\d.,\u202f\u2212-]+ (?:–|to) [\d.,\u202f\u2212-]+\)")
 _NUMBER = re.compile(r"[<>≤≥±~]?\s*[-\u2212+]?[\d\s,.\u202f]*\d(?:e[-+]?\d+)?\s*%?")
 
 CAUTIONS = (
@@ -265,13 +264,22 @@ def is_number(text: str) -> bool:
     return bool(_NUMBER.fullmatch(bare)) and not re.match(r"0\d", bare)
 
 
-def bind_interval(text: str) -> str:
-    """Keep an interval in brackets on one line: a break may come before the bracket only.
+def bind_interval(text: str) -> Any:
+    """Keep an interval in brackets on one line, as escaped HTML: a break may come before the bracket only.
 
-    >>> bind_interval("90.3 (65.5 – 125)").count(NO_BREAK)
-    2
+    >>> bind_interval("90.3 (65.5 – 125)")
+    Markup('90.3 <span class="keep">(65.5 – 125)</span>')
     """
-    return _INTERVAL.sub(lambda found: found[0].replace(" ", NO_BREAK), text)
+    from markupsafe import Markup, escape
+
+    found = _INTERVAL.search(text)
+    if found is None:
+        return escape(text)
+    return (
+        escape(text[: found.start()])
+        + Markup('<span class="keep">{}</span>').format(found[0])
+        + escape(text[found.end() :])
+    )
 
 
 def number_columns(table: PageTable) -> list[bool]:
