@@ -265,6 +265,7 @@ def test_nonsense_is_explained_and_gives_no_number(example_page, values, explain
         ("", "no table"),
         ("area,region\n12,west\n", "lacks precipitation, forest"),
         ("area;precipitation;forest;region\n12;900;x;west\n13;900;40;west\n", "Row 2: forest is “x”"),
+        ("area,precipitation,forest,region\n12,5,900,40,west\n", "comma inside a number"),
         ("area,area,precipitation,forest,region\n1,1,900,40,west\n", "twice"),
     ],
 )

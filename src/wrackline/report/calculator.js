@@ -154,6 +154,10 @@ const calculator = (() => {
     const proper = new Map([...needed, ...optional].map((name) => [name.toLowerCase(), name]));
     const faults = [], found = [];
     rows.slice(1).forEach((cells, n) => {
+      if (cells.length > head.length) {
+        faults.push(`Row ${n + 2} has ${cells.length} cells, the header ${head.length}: is there a comma inside a number or a name? Write decimals after a point, names with commas in quotes.`);
+        return;
+      }
       const texts = {};
       head.forEach((name, column) => { texts[proper.get(name) ?? name] = unquote(cells[column] ?? ""); });
       const { problems, site } = readSite(texts, `row ${n + 2}`);
