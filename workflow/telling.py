@@ -12,6 +12,7 @@ CHATTER = (
     "Assuming unrestricted shared filesystem",
     "Building DAG of jobs",
     "Updating checkpoint dependencies",
+    "DAG of jobs will be updated after completion",
     "Using shell:",
     "Select jobs to execute",
     "Execute ",

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import hashlib
 import json
 from dataclasses import asdict, dataclass, field
 from pathlib import Path
@@ -60,7 +61,10 @@ class Contribution:
 
 
 def write_contribution(folder: Path, contribution: Contribution) -> None:
-    """Write a contribution below ``folder`` (``work/<stage>``); figures are already in ``folder/figures``."""
+    """Write a contribution below ``folder`` (``work/<stage>``); figures are already in ``folder/figures``.
+
+    The document holds a digest of every file that will be published, so that it changes whenever one of them does.
+    """
     for table in contribution.tables:
         write_table(folder / "tables" / f"{table.name}.csv", table.frame)
     for name, content in contribution.models.items():
@@ -71,15 +75,32 @@ def write_contribution(folder: Path, contribution: Contribution) -> None:
         "models": sorted(contribution.models),
         "sections": [asdict(section) for section in contribution.sections],
         "warnings": [fault.to_dict() for fault in contribution.warnings],
+        "sha256": _digests(folder, contribution),
     }
     write_text(folder / "contribution.json", to_json(document))
+
+
+def _digests(folder: Path, contribution: Contribution) -> dict[str, str]:
+    names = [
+        *(f"tables/{table.name}.csv" for table in contribution.tables),
+        *(f"tables/{name}.json" for name in contribution.models),
+        *(f"figures/{figure.file}" for section in contribution.sections for figure in section.figures),
+    ]
+    paths = {name: folder / name for name in names}
+    return {
+        name: hashlib.sha256(path.read_bytes()).hexdigest() for name, path in paths.items() if path.is_file()
+    }
 
 
 def read_contribution(folder: Path) -> Contribution:
     """Read back what `write_contribution` wrote."""
     document = json.loads((folder / "contribution.json").read_text(encoding="utf-8"))
     tables = tuple(
-        Table(name, _read_published(folder / "tables" / f"{name}.csv", columns), tuple(Column(**c) for c in columns))
+        Table(
+            name,
+            _read_published(folder / "tables" / f"{name}.csv", columns),
+            tuple(Column(**c) for c in columns),
+        )
         for name, columns in document["tables"].items()
     )
     models = {
