@@ -63,6 +63,9 @@ def read_arguments() -> argparse.Namespace:
         "test", help="run all checks and tests, or pytest alone with the arguments given"
     )
     test.add_argument("pytest", nargs=argparse.REMAINDER, help="arguments for pytest, such as -k pool")
+    # argparse would take a leading option of pytest's, such as -k, for one of its own.
+    if sys.argv[1:2] == ["test"] and sys.argv[2:] not in (["-h"], ["--help"]):
+        return argparse.Namespace(command="test", pytest=sys.argv[2:])
     return parser.parse_args()
 
 

@@ -75,5 +75,7 @@ def test_covariance_of_two_quantiles_matches_simulation():
     simulated = np.cov(q.T)
     covariance = quantile_sampling_covariance(pair(g, rho, 0.0, n, shared), 0.01)
     # Three standard errors of the simulated covariance, and 2 % for the first-order formula at n = 50.
-    assert covariance[0, 1] == pytest.approx(simulated[0, 1], rel=0.02, abs=3 * simulated[0, 0] / np.sqrt(runs))
+    assert covariance[0, 1] == pytest.approx(
+        simulated[0, 1], rel=0.02, abs=3 * simulated[0, 0] / np.sqrt(runs)
+    )
     assert covariance[0, 0] == pytest.approx(simulated[0, 0], rel=0.04)

@@ -96,9 +96,7 @@ def test_coefficients_errors_and_prediction(probability):
     )
     np.testing.assert_allclose(fit.coefficients, expected["beta_GLS"], rtol=ROOT)
     np.testing.assert_allclose(weighted.coefficients, expected["beta_WLS"], rtol=ROOT)
-    np.testing.assert_allclose(
-        np.sqrt(np.diag(fit.coefficient_covariance)), expected["se_GLS"], rtol=ROOT
-    )
+    np.testing.assert_allclose(np.sqrt(np.diag(fit.coefficient_covariance)), expected["se_GLS"], rtol=ROOT)
     assert fit.prediction_variance.mean() == pytest.approx(expected["AVP"], rel=ROOT)
     assert standard_error_percent(fit.prediction_variance.mean()) == pytest.approx(
         expected["SEP_pct"], rel=ROOT

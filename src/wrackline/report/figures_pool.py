@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from itertools import cycle
 from pathlib import Path
 
 import numpy as np
@@ -36,7 +37,7 @@ def draw_ratio_diagram(path: Path, pools: dict[str, PoolAnalysis]) -> None:
     skews = np.concatenate([p.lmoments.t3 for p in pools.values()])
     kurtoses = np.concatenate([p.lmoments.t4 for p in pools.values()])
     reach = np.linspace(min(skews.min(), 0.0) - 0.05, max(skews.max(), 0.3) + 0.05, 200)
-    for law, line in zip(distributions.CANDIDATES.values(), LINES, strict=True):
+    for law, line in zip(distributions.CANDIDATES.values(), cycle(LINES), strict=False):
         axes.plot(
             reach,
             law.fourth_ratio(reach),

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from itertools import cycle
 from pathlib import Path
 
 import numpy as np
@@ -69,7 +70,7 @@ def draw_sheet(path: Path, name: str, pool: PoolAnalysis, gauges: pd.DataFrame) 
 
     size = 12 + 60 * weight
     reach = np.linspace(lm.t3.min() - 0.05, lm.t3.max() + 0.05, 100)
-    for candidate, line in zip(distributions.CANDIDATES.values(), LINES, strict=True):
+    for candidate, line in zip(distributions.CANDIDATES.values(), cycle(LINES), strict=False):
         middle.plot(
             reach,
             candidate.fourth_ratio(reach),

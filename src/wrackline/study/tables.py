@@ -41,7 +41,9 @@ class Table:
     def __post_init__(self) -> None:
         stated = [column.name for column in self.columns]
         if stated != list(self.frame.columns):
-            raise ValueError(f"table {self.name}: columns {list(self.frame.columns)} are not those stated, {stated}")
+            raise ValueError(
+                f"table {self.name}: columns {list(self.frame.columns)} are not those stated, {stated}"
+            )
 
 
 @contextmanager
