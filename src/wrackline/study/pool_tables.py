@@ -30,6 +30,13 @@ LMOMENT_COLUMNS = (
     Column("lkurtosis", "", "L-kurtosis, fourth L-moment over the second"),
     Column("l5_ratio", "", "fifth L-moment over the second"),
     Column("pool", "text", "pool that the gauge uses; blank: none"),
+    Column(
+        "pooled_lcv",
+        "",
+        "L-CV as it enters averages: other than `lcv` where low years were completed; blank: in none",
+    ),
+    Column("pooled_lskew", "", "L-skew as it enters averages"),
+    Column("pooled_lkurtosis", "", "L-kurtosis as it enters averages"),
 )
 POOL_COLUMNS = (
     Column("pool", "text", "pool"),
@@ -183,15 +190,23 @@ def build_tables(
         ]
         rows["pool_cluster_trials"] = (TRIAL_COLUMNS, trials)
     return (
-        Table("gauge_lmoments", lmoment_rows(config, records, plan.home), LMOMENT_COLUMNS),
+        Table("gauge_lmoments", lmoment_rows(config, records, plan.home, pools), LMOMENT_COLUMNS),
         *(_table(name, columns, found) for name, (columns, found) in rows.items()),
     )
 
 
-def lmoment_rows(config: StudyConfig, records: PeakRecords, home: dict[str, str]) -> pd.DataFrame:
+def lmoment_rows(
+    config: StudyConfig, records: PeakRecords, home: dict[str, str], pools: dict[str, PoolAnalysis]
+) -> pd.DataFrame:
     """A row per used gauge; blank ratios where the record is too short for them."""
     exact = records.keep_rows(records.systematic_exact)
     lm = sample_lmoments(exact.flow_low, exact.offsets)
+    pooled = {
+        gauge: (pool.lmoments.t[i], pool.lmoments.t3[i], pool.lmoments.t4[i])
+        for pool in pools.values()
+        for i, gauge in enumerate(pool.gauge_ids)
+    }
+    as_pooled = np.array([pooled.get(gauge, (np.nan,) * 3) for gauge in records.gauge_ids]).reshape(-1, 3)
     return pd.DataFrame(
         {
             "gauge_id": list(records.gauge_ids),
@@ -202,6 +217,9 @@ def lmoment_rows(config: StudyConfig, records: PeakRecords, home: dict[str, str]
             "lkurtosis": lm.t4,
             "l5_ratio": lm.t5,
             "pool": [home[gauge] for gauge in records.gauge_ids],
+            "pooled_lcv": as_pooled[:, 0],
+            "pooled_lskew": as_pooled[:, 1],
+            "pooled_lkurtosis": as_pooled[:, 2],
         }
     )
 
