@@ -125,6 +125,14 @@ def test_tables_have_the_promised_columns(contribution):
         assert columns == list(table(contribution, name).columns[: len(columns)])
 
 
+def test_averages_follow_from_the_published_weights_and_l_moments(contribution):
+    pooled = table(contribution, "gauge_lmoments").set_index("gauge_id")["pooled_lcv"]
+    members = table(contribution, "pools")
+    for test in table(contribution, "pool_tests").itertuples():
+        own = members[(members["pool"] == test.pool) & (members["weight"] > 0)]
+        assert test.lcv == pytest.approx((own["weight"] * own["gauge_id"].map(pooled)).sum(), rel=1e-12)
+
+
 def test_moves_and_short_records_are_in_the_table_with_their_reasons(contribution):
     pools = table(contribution, "pools").set_index("gauge_id")
     assert "south" == pools.loc[MOVED, "pool"]
