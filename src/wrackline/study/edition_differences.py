@@ -106,6 +106,8 @@ def mix_records(
 ) -> dict[str, pd.DataFrame]:
     """Make the tables that records are built from, in which only some causes have acted, for gauges of both editions.
 
+    Tables that the edition does not have are left out.
+
     Parameters
     ----------
     acted : names among `OWN_CAUSES`
@@ -121,7 +123,9 @@ def mix_records(
     single = after if "own_new_peaks" in acted else before
     peaks = pd.concat([shared, single.loc[single.index.difference(both)]], ignore_index=True)
     source = new if "own_thresholds_flags" in acted else old
-    found = {"peaks": peaks, "thresholds": source.table("thresholds"), "periods": source.table("periods")}
+    found = {"peaks": peaks} | {
+        key: source.tables[key] for key in ("thresholds", "periods") if key in source.tables
+    }
     found = {key: table[table["gauge_id"].isin(gauge_ids)] for key, table in found.items()}
     there = set(zip(found["peaks"]["gauge_id"], found["peaks"]["water_year"], strict=True))
     ledger = source.ledger(about_data=True)
@@ -132,7 +136,7 @@ def mix_records(
             for (gauge, year), subject in zip(keys, ledger["subject"], strict=True)
         ]
         ledger = ledger[stands]
-    return {**found, "ledger": ledger}
+    return {**found, "ledger": ledger} if "ledger" in source.tables else found
 
 
 def mix_study(
