@@ -19,6 +19,7 @@ from study_folder import (
     lock_study,
     named_study,
     read_study,
+    require_previous,
 )
 from telling import hush, tell_failure, tell_results
 from wiring import (
@@ -39,6 +40,7 @@ if AS_MODULE:
 else:
     STUDY = find_study(workflow, default=HERE / "example_region" / "study.yaml")
 CONFIG = read_study(STUDY)
+require_previous(STUDY, CONFIG)
 RESULTS = CONFIG.output.replace("{", "{{").replace("}", "}}")
 RUN_STAGES = stages_of(CONFIG)
 

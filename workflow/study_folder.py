@@ -50,6 +50,18 @@ def read_study(study: Path) -> Any:
         stop("\n".join([*map(str, faults.problems), str(faults), f"Study file: {study}"]))
 
 
+def require_previous(study: Path, config: Any) -> None:
+    """End the run when the edition that the study is to be compared with is not there."""
+    if not config.editions.previous:
+        return
+    edition = Path(config.editions.folder) / config.editions.previous
+    if not (study.parent / edition / "edition.json").is_file():
+        stop(
+            f"{study.name}: `editions.previous` names {edition}, and no edition lies there. "
+            "Freeze one (`wrackline freeze`), correct the name, or leave it blank."
+        )
+
+
 def lock_study(folder: Path) -> None:
     """Hold the study's folder until this process ends, however it ends; end politely if another run holds it."""
     try:
