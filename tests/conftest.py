@@ -42,6 +42,13 @@ def copy_example() -> Callable[..., Path]:
 
 
 @pytest.fixture(scope="session")
+def quick_parts() -> dict[str, dict[str, Any]]:
+    """What makes a whole study quick, for tests of the workflow that do not look at its numbers."""
+    few = {"simulations": 100, "close_call_simulations": 100, "growth_simulations": 100, "compare": []}
+    return {"pooling": few, "at_site": {"alternatives": False}}
+
+
+@pytest.fixture(scope="session")
 def run_workflow() -> Callable[..., subprocess.CompletedProcess[str]]:
     """Run the workflow on a study as the README says, from the repository's root; give back what it printed."""
 

@@ -44,13 +44,14 @@ def find_programs() -> tuple[str, str]:
 
 
 @pytest.fixture(scope="session")
-def example_results(tmp_path_factory: pytest.TempPathFactory, copy_example: Callable[..., Path]) -> Path:
+def example_results(
+    tmp_path_factory: pytest.TempPathFactory, copy_example: Callable[..., Path], quick_parts: dict[str, Any]
+) -> Path:
     """Run the example study with few simulations, one gauge bearing a hostile name; give back its results folder."""
     find_programs()
     study = copy_example(
         tmp_path_factory.mktemp("browser") / "study",
-        at_site={"alternatives": False},
-        pooling={"simulations": 100, "close_call_simulations": 100, "growth_simulations": 100, "compare": []},
+        **quick_parts,
     )
     gauges = study.parent / "gauges.csv"
     with gauges.open(encoding="utf-8", newline="") as file:

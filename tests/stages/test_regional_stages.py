@@ -34,12 +34,6 @@ STAGES = (
     "validate",
     "estimate",
 )
-FEW = {
-    "simulations": 100,
-    "close_call_simulations": 100,
-    "growth_simulations": 100,
-    "compare": [],
-}
 CONTRACT = [
     "gauge_id",
     "aep",
@@ -61,11 +55,10 @@ def run_stages(study_file, stages=STAGES):
 
 
 @pytest.fixture(scope="module")
-def study(tmp_path_factory, copy_example):
+def study(tmp_path_factory, copy_example, quick_parts):
     file = copy_example(
         tmp_path_factory.mktemp("regional") / "study",
-        pooling=FEW,
-        at_site={"alternatives": False},
+        **quick_parts,
         skew={"surface": False},
     )
     return run_stages(file)

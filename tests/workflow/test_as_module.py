@@ -7,13 +7,13 @@ import subprocess
 import sys
 from collections.abc import Callable
 from pathlib import Path
+from typing import Any
 
 import pytest
 
 pytestmark = pytest.mark.workflow
 
 Run = Callable[..., "subprocess.CompletedProcess[str]"]
-FEW = {"simulations": 100, "close_call_simulations": 100, "growth_simulations": 100}
 OUTER = """
 module {name}:
     snakefile: "{snakefile}"
@@ -33,7 +33,9 @@ rule count:
 
 
 @pytest.fixture
-def outer(tmp_path: Path, repository: Path, copy_example: Callable[..., Path]) -> Callable[..., Path]:
+def outer(
+    tmp_path: Path, repository: Path, copy_example: Callable[..., Path], quick_parts: dict[str, Any]
+) -> Callable[..., Path]:
     """Write an outer workflow over studies in the folders given by module; its own rule wants a file of each."""
 
     def write(wanted: str, **folders: str) -> Path:
@@ -43,7 +45,7 @@ def outer(tmp_path: Path, repository: Path, copy_example: Callable[..., Path]) -
         ]
         inputs = ", ".join(f'"{folder}/{wanted}"' for folder in folders.values())
         for folder in folders.values():
-            copy_example(tmp_path / folder, pooling=FEW)
+            copy_example(tmp_path / folder, **quick_parts)
         (tmp_path / "Snakefile").write_text(
             "\n".join([*parts, DIGEST.format(inputs=inputs)]), encoding="utf-8"
         )

@@ -23,7 +23,6 @@ Run = Callable[..., "subprocess.CompletedProcess[str]"]
 STAGES = [
     "intake", "screen", "dependence", "atsite", "skew", "weight", "pool", "regress", "validate", "estimate", "publish",
 ]  # fmt: skip
-FEW = {"simulations": 100, "close_call_simulations": 100, "growth_simulations": 100}
 """Few simulations: these tests are of the workflow, not of the numbers."""
 
 
@@ -37,10 +36,13 @@ def tables(study: Path) -> dict[str, bytes]:
 
 @pytest.fixture(scope="module")
 def finished(
-    tmp_path_factory: pytest.TempPathFactory, copy_example: Callable[..., Path], run_workflow: Run
+    tmp_path_factory: pytest.TempPathFactory,
+    copy_example: Callable[..., Path],
+    quick_parts: dict[str, Any],
+    run_workflow: Run,
 ) -> tuple[Path, str]:
     """The example, run with two cores in a folder whose path has blanks and letters of three scripts."""
-    study = copy_example(tmp_path_factory.mktemp("a study") / "Überflutung 洪水 {наводнение}", pooling=FEW)
+    study = copy_example(tmp_path_factory.mktemp("a study") / "Überflutung 洪水 {наводнение}", **quick_parts)
     run = run_workflow(study, "--cores", "2")
     assert 0 == run.returncode, run.stdout
     return study, run.stdout
@@ -138,9 +140,13 @@ def test_new_title_is_published_without_computing_anything_anew(
 
 
 def test_one_core_and_shuffled_rows_give_the_same_tables(
-    finished: tuple[Path, str], tmp_path: Path, copy_example: Callable[..., Path], run_workflow: Run
+    finished: tuple[Path, str],
+    tmp_path: Path,
+    copy_example: Callable[..., Path],
+    quick_parts: dict[str, Any],
+    run_workflow: Run,
 ) -> None:
-    study = copy_example(tmp_path / "shuffled", pooling=FEW)
+    study = copy_example(tmp_path / "shuffled", **quick_parts)
     for name in ("gauges", "peaks", "thresholds", "periods", "targets", "redundancy", "ledger"):
         path = study.parent / f"{name}.csv"
         head, *rows = path.read_text(encoding="utf-8").splitlines()
@@ -166,10 +172,11 @@ def test_killed_run_is_taken_up_again(
     finished: tuple[Path, str],
     tmp_path: Path,
     copy_example: Callable[..., Path],
+    quick_parts: dict[str, Any],
     run_workflow: Run,
     repository: Path,
 ) -> None:
-    study = copy_example(tmp_path / "killed", pooling=FEW)
+    study = copy_example(tmp_path / "killed", **quick_parts)
     process = subprocess.Popen(
         [sys.executable, "-m", "snakemake", "--configfile", str(study)],
         cwd=repository,
@@ -191,9 +198,9 @@ def test_killed_run_is_taken_up_again(
 
 
 @pytest.fixture
-def spoilt(tmp_path: Path, copy_example: Callable[..., Path]) -> Path:
+def spoilt(tmp_path: Path, copy_example: Callable[..., Path], quick_parts: dict[str, Any]) -> Path:
     """The example with two mistakes in its peaks."""
-    study = copy_example(tmp_path / "spoilt", pooling=FEW)
+    study = copy_example(tmp_path / "spoilt", **quick_parts)
     peaks = study.parent / "peaks.csv"
     head, first, second, *rows = peaks.read_text(encoding="utf-8").splitlines()
     names = head.split(",")

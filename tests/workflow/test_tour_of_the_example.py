@@ -10,13 +10,12 @@ import subprocess
 import sys
 from collections.abc import Callable
 from pathlib import Path
+from typing import Any
 
 import pytest
 import yaml
 
 pytestmark = pytest.mark.workflow
-
-FEW = {"simulations": 100, "close_call_simulations": 100, "growth_simulations": 100}
 
 
 @pytest.fixture(scope="module")
@@ -33,6 +32,7 @@ def toured(
     repository: Path,
     tmp_path_factory: pytest.TempPathFactory,
     copy_example: Callable[..., Path],
+    quick_parts: dict[str, Any],
 ) -> tuple[Path, list[str]]:
     """A place that looks like the repository, after the tour, and what every block printed.
 
@@ -41,7 +41,7 @@ def toured(
     place = tmp_path_factory.mktemp("tour of")
     for name in ("Snakefile", "profiles", "workflow", "config", "src"):
         (place / name).symlink_to(repository / name)
-    copy_example(place / "example_region", pooling=FEW)
+    copy_example(place / "example_region", **quick_parts)
     shutil.copy(repository / "example_region" / "peaks_later.csv", place / "example_region")
     program = Path(sys.executable).parent
     path = os.pathsep.join([str(program), os.environ["PATH"]])

@@ -123,12 +123,11 @@ def _mean_digamma(z: FloatArray, k: FloatArray) -> FloatArray:
     It is the mean of the digamma function between z and z + k: no difference of large logarithms. The
     recurrence moves the interval away from the poles, where ten nodes give it to rounding.
     """
-    moved = z + _SHIFT
-    mean = sum(
-        weight * psi(moved + node * k) for node, weight in zip(_UNIT_NODES, _UNIT_WEIGHTS, strict=True)
+    z, k = np.broadcast_arrays(z, k)
+    nodes = z[..., None] + _SHIFT + k[..., None] * _UNIT_NODES
+    mean = psi(nodes) @ _UNIT_WEIGHTS - unbend(1 / (z[..., None] + np.arange(_SHIFT)), -k[..., None]).sum(
+        axis=-1
     )
-    for j in range(_SHIFT):
-        mean = mean - unbend(1 / (z + j), -k)
     wide = np.abs(k) > 3
     if np.any(wide):
         mean = np.where(wide, (gammaln(z + k) - gammaln(z)) / np.where(wide, k, 1.0), mean)
@@ -141,13 +140,11 @@ def _log_moments_over_k(k: FloatArray, h: FloatArray) -> list[FloatArray]:
     size = np.where(at_zero, 1.0, np.abs(h))
     positive = h >= 0
     common = _mean_digamma(np.ones_like(k), k) - np.log(size)
-    moments = []
-    for r in range(1, 5):
-        z = np.where(positive, 1.0, 0.0) + r / size
-        log_g_over_k = common - _mean_digamma(z, np.where(positive, k, -k))
-        limit = common - np.log(r)
-        moments.append(np.where(at_zero, limit, log_g_over_k))
-    return moments
+    order = np.arange(1, 5).reshape(4, *[1] * np.ndim(k))
+    log_g_over_k = common - _mean_digamma(
+        np.where(positive, 1.0, 0.0) + order / size, np.where(positive, k, -k)
+    )
+    return list(np.where(at_zero, common - np.log(order), log_g_over_k))
 
 
 def _ratios(k: FloatArray, h: FloatArray) -> tuple[FloatArray, FloatArray]:
