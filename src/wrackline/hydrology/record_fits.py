@@ -97,10 +97,10 @@ class RecordFits:
     weighted : SkewFit or None
         With the weighted skew; None when no generalized skew was given. NaN at gauges without one.
     censoring_ratio : float array (g,)
-        Asymptotic variance of the station skew over that of a complete record of as many years, at the best fit.
+        Asymptotic variance of the station skew over that of a complete record of as many years, at the fit in use.
     generalized_skew, generalized_skew_mse : float arrays (g,) or None
     refusal : tuple of str, length g
-        Why there is no best fit; empty where there is one. That the station fit alone failed is a warning.
+        Why there is no fit in use; empty where there is one. That the station fit alone failed is a warning.
     warnings : tuple of tuple of FitWarning, length g
     """
 
