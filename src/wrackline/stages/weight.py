@@ -92,7 +92,9 @@ def fit_weighted(study: StudyFiles) -> Weighted:
     ids = moments["gauge_id"].tolist()
     screened = read_sites(study.work("screen") / "gauges.csv").set_index("gauge_id").loc[ids]
     flags = read_table(study.work("screen") / "gauges.csv", text=("flags", "reasons")).set_index("gauge_id")
-    natural = np.array(["regulated" not in text.split() for text in flags.loc[ids, "flags"]], dtype=bool)
+    natural = screened["used"].to_numpy(dtype=bool) | np.array(
+        ["regulated" not in text.split() for text in flags.loc[ids, "flags"]], dtype=bool
+    )
     sites = read_table(study.work("skew") / "sites.csv").set_index("site_id")
     sites = sites[sites["gauge"]].loc[ids]
     skew, mse = (sites[name].to_numpy(dtype=float) for name in ("generalized_skew", "generalized_skew_mse"))
