@@ -76,8 +76,16 @@ def prepare_shell() -> None:
 
 
 def settings(config: Any, *parts: str) -> str:
-    """Return the named parts of the typed configuration as text: a change of any other part is no reason to rerun."""
-    return json.dumps({part: config.model_dump(mode="json")[part] for part in parts}, sort_keys=True)
+    """Return the named parts of the typed configuration as text: a change of any other part is no reason to rerun.
+
+    ``part.key`` names one key of a part.
+    """
+    content = config.model_dump(mode="json")
+    named = {}
+    for name in parts:
+        part, _, key = name.partition(".")
+        named[name] = content[part][key] if key else content[part]
+    return json.dumps(named, sort_keys=True)
 
 
 def source_digest(stage: str) -> str:

@@ -14,7 +14,9 @@ rule compare:
         "../envs/python.yaml"
     params:
         settings=settings(
-            CONFIG, *(part for part in type(CONFIG).model_fields if part != "study")
+            CONFIG,
+            "study.edition",
+            *(part for part in type(CONFIG).model_fields if part != "study"),
         ),
         sources=source_digest("compare"),
     shell:

@@ -24,7 +24,7 @@ rule estimate:
     params:
         settings=settings(
             CONFIG,
-            "study",
+            "study.edition",
             "aeps",
             "at_site",
             "attributes",
