@@ -77,6 +77,24 @@ def _source(name: str, **columns: Any) -> Any:
     return ColumnDataSource(name=name, data=columns)
 
 
+def _add_spans(frame: Any, name: str, across: str, colour: str, width: float) -> None:
+    """Add upright lines from ``low`` to ``high`` at the places ``across``; the page fills their source."""
+    source = _source(name, **{column: [] for column in (across, "low", "high")})
+    frame.segment(
+        across, "low", across, "high", source=source, name=name, line_color=colour, line_width=width
+    )
+
+
+def _add_peaks(frame: Any, name: str, across: str, size: float, hover: str) -> None:
+    """Add the peaks of the picked site, each with its marker and fill, and what they say under the pointer."""
+    columns: dict[str, Any] = {column: [] for column in (across, "flow", "marker", "fill", "label")}
+    peaks = frame.scatter(
+        across, "flow", source=_source(name, **columns), name=name,
+        marker="marker", fill_color="fill", line_color=INK, size=size,
+    )  # fmt: skip
+    frame.add_tools(_hover(peaks, hover))
+
+
 def _hover(renderer: Any, name: str) -> Any:
     from bokeh.models import HoverTool
 
@@ -208,28 +226,8 @@ def _curve(aeps: Sequence[Mapping[str, Any]]) -> Any:
         line_width="width",
         line_dash="dash",
     )
-    frame.segment(
-        "z",
-        "low",
-        "z",
-        "high",
-        source=_source("spans", z=[], low=[], high=[]),
-        name="spans",
-        line_color=INK,
-        line_width=1.2,
-    )
-    columns: dict[str, Any] = {name: [] for name in ("z", "flow", "marker", "fill", "label")}
-    peaks = frame.scatter(
-        "z",
-        "flow",
-        source=_source("peaks", **columns),
-        name="peaks",
-        marker="marker",
-        fill_color="fill",
-        line_color=INK,
-        size=7,
-    )
-    frame.add_tools(_hover(peaks, "peak hover"))
+    _add_spans(frame, "spans", "z", INK, 1.2)
+    _add_peaks(frame, "peaks", "z", 7, "peak hover")
     return frame
 
 
@@ -259,26 +257,6 @@ def _years() -> Any:
         fill_color=MUTED,
         line_color=None,
     )
-    frame.segment(
-        "year",
-        "low",
-        "year",
-        "high",
-        source=_source("stems", year=[], low=[], high=[]),
-        name="stems",
-        line_color=WATER,
-        line_width=1.3,
-    )
-    columns: dict[str, Any] = {name: [] for name in ("year", "flow", "marker", "fill", "label")}
-    dots = frame.scatter(
-        "year",
-        "flow",
-        source=_source("dots", **columns),
-        name="dots",
-        marker="marker",
-        fill_color="fill",
-        line_color=INK,
-        size=6,
-    )
-    frame.add_tools(_hover(dots, "year hover"))
+    _add_spans(frame, "stems", "year", WATER, 1.3)
+    _add_peaks(frame, "dots", "year", 6, "year hover")
     return frame

@@ -6,7 +6,6 @@ import os
 import shutil
 from collections.abc import Collection
 from dataclasses import dataclass
-from functools import cached_property
 from pathlib import Path
 from typing import Any
 
@@ -211,11 +210,6 @@ class Counterfactuals:
             kept.parent.mkdir(parents=True, exist_ok=True)
             os.rename(study.work(stage), kept)
         _link(kept, study.work(stage))
-
-    @cached_property
-    def endpoints(self) -> tuple[StudyFiles, StudyFiles]:
-        """The old inputs run with this software, and the new ones."""
-        return self.models(False, False, False), self.models(True, True, True)
 
 
 def collect_adopted(tables: dict[str, pd.DataFrame], keys: SiteKeys, column: str = "flow") -> FloatArray:

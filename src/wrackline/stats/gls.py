@@ -220,12 +220,6 @@ class CoverFactor:
 
     root: FloatArray
 
-    @property
-    def log_det(self) -> float:
-        """Logarithm of the determinant of ``L``."""
-        diagonal = self.root if self.root.ndim == 1 else np.diagonal(self.root)
-        return float(2 * np.log(diagonal).sum())
-
     def whiten(self, columns: FloatArray) -> FloatArray:
         """Return ``R^-1 columns``; columns (n,) or (n, m)."""
         if self.root.ndim == 1:

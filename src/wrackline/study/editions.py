@@ -56,11 +56,6 @@ class Edition:
     def table_folder(self) -> Path:
         return self.results / "tables"
 
-    def same_software(self, other: Edition) -> bool:
-        """Whether both were made by the same versions of everything and the same sources."""
-        keys = ("software", "sources_sha256")
-        return all(self.manifest.get(key) == other.manifest.get(key) for key in keys)
-
 
 def freeze(study_file: Path, name: str) -> Path:
     """Keep a finished run as an edition: inputs, results, manifest, and a digest of every file; return its folder.
